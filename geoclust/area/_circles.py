@@ -134,3 +134,46 @@ def circle_share(grid, cx, cy, r):
 def share_many(grid, centres, radii, out):
     for k in range(radii.size):
         out[k] = circle_share(grid, centres[k, 0], centres[k, 1], radii[k])
+
+
+@njit(nogil=True, cache=True)
+def count_meeting(grid, centres, r):
+    """Number of circles of radius `r` with a point in W: a crossing, or else one point inside."""
+    r2 = r * r
+    half = 0.5 * grid.cell
+    count = 0
+    for c in range(centres.shape[0]):
+        cx, cy = centres[c, 0], centres[c, 1]
+        j_low = max(int(np.floor((cy - r - half - grid.bottom) / grid.cell)), 0)
+        j_high = min(int(np.floor((cy + r + half - grid.bottom) / grid.cell)), grid.rows - 1)
+        met = is_inside(grid, cx + r, cy)
+        j = j_low
+        while j <= j_high and not met:
+            # two arms of the circle in this row of cells, each as a range of columns
+            below = grid.bottom + j * grid.cell - half - cy
+            above = below + 2.0 * half + grid.cell
+            nearest = max(max(below, -above), 0.0)
+            furthest = max(abs(below), abs(above))
+            wide = np.sqrt(max(r2 - nearest * nearest, 0.0)) + half
+            deep = np.sqrt(max(r2 - furthest * furthest, 0.0)) - half
+            for arm in range(2):
+                if arm == 0:
+                    x_low, x_high = cx - wide, cx - max(deep, -wide)
+                else:
+                    x_low, x_high = cx + max(deep, -wide), cx + wide
+                i_low = max(int(np.floor((x_low - grid.left) / grid.cell)), 0)
+                i_high = min(int(np.floor((x_high - grid.left) / grid.cell)), grid.columns - 1)
+                if i_low > i_high or met:
+                    continue
+                base = j * grid.columns
+                for k in range(grid.first[base + i_low], grid.first[base + i_high + 1]):
+                    _, _, crossings = cross_piece(
+                        grid.x0[k] - cx, grid.y0[k] - cy, grid.x1[k] - cx, grid.y1[k] - cy, r2, 1.0, 0.0
+                    )
+                    if crossings > 0:
+                        met = True
+                        break
+            j += 1
+        if met:
+            count += 1
+    return count

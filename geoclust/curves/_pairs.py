@@ -1,0 +1,272 @@
+"""Compiled pair sums over a cell grid: one pass, no stored pairs.
+
+Points are sorted by square cells of a third of the largest distance, row by
+row, so the neighbours of a point lie in a few contiguous runs. Every unordered
+pair is met once. A pair adds w/d, w and w d to the distance class it falls
+in; as an Epanechnikov kernel is a quadratic in the distance, these three
+moments give the kernel sums of g exactly at every radius, whatever the
+bandwidth, and the second alone gives K.
+
+Sums go to one table per block of rows, and blocks are added in order, so the
+result has the same bits for any number of threads.
+"""
+
+from __future__ import annotations
+
+from typing import NamedTuple
+
+import numpy as np
+from numba import njit
+
+from geoclust.area._circles import cross_piece, share_from_product
+
+# cells per largest distance
+FINE = 3
+
+
+class SortedPoints(NamedTuple):
+    """Points in the order of their cells (local coordinates)."""
+
+    x: np.ndarray  # (n,)
+    y: np.ndarray
+    weight: np.ndarray  # (n,) factor of each point, or (0,) if all are one
+    depth: np.ndarray  # (n,) distance to the boundary, capped at the largest distance; (0,) if unused
+    first: np.ndarray  # (cells + 1,)
+    columns: int
+    rows: int
+
+
+class Classes(NamedTuple):
+    """Distance classes: edge k closes class k, the last edge is the largest distance."""
+
+    squared: np.ndarray  # (c,) squared edges, increasing
+    guess: np.ndarray  # (t,) first class that may hold a distance of this table cell
+    scale: float  # table cells per metre
+
+
+@njit(nogil=True, cache=True)
+def cell_order(x, y, left, bottom, cell, columns, rows):
+    """Counting sort of points by cell, row by row."""
+    n = x.size
+    where = np.empty(n, np.int32)
+    first = np.zeros(columns * rows + 1, np.int32)
+    for k in range(n):
+        i = min(max(int((x[k] - left) / cell), 0), columns - 1)
+        j = min(max(int((y[k] - bottom) / cell), 0), rows - 1)
+        where[k] = j * columns + i
+        first[where[k] + 1] += 1
+    for c in range(columns * rows):
+        first[c + 1] += first[c]
+    fill = first[:-1].copy()
+    order = np.empty(n, np.int32)
+    for k in range(n):
+        order[fill[where[k]]] = k
+        fill[where[k]] += 1
+    return order, first
+
+
+@njit(nogil=True, cache=True)
+def guess_table(squared, size):
+    """For each of `size` equal steps of distance, the first class that may hold it."""
+    largest = np.sqrt(squared[-1])
+    guess = np.empty(size + 2, np.int32)
+    c = 0
+    for t in range(size + 2):
+        # one step back, as the square root and the product may round
+        low = max(t - 1, 0) / size * largest
+        while c < squared.size - 1 and squared[c] < low * low:
+            c += 1
+        guess[t] = c
+    return guess
+
+
+@njit(nogil=True, cache=True)
+def deep_cells(occupied, columns, rows, reach):
+    """Cells of the edge grid with no occupied cell within `reach` cells (square neighbourhood)."""
+    # two passes, along rows and then along columns
+    along = np.zeros((rows, columns), np.bool_)
+    for j in range(rows):
+        last = -10 * reach - 10
+        for i in range(columns):
+            if occupied[j * columns + i]:
+                last = i
+            along[j, i] = i - last <= reach
+        last = columns + 10 * reach + 10
+        for i in range(columns - 1, -1, -1):
+            if occupied[j * columns + i]:
+                last = i
+            along[j, i] = along[j, i] or last - i <= reach
+    deep = np.ones(columns * rows, np.bool_)
+    for i in range(columns):
+        last = -10 * reach - 10
+        for j in range(rows):
+            if along[j, i]:
+                last = j
+            deep[j * columns + i] = j - last > reach
+        last = rows + 10 * reach + 10
+        for j in range(rows - 1, -1, -1):
+            if along[j, i]:
+                last = j
+            deep[j * columns + i] = deep[j * columns + i] and last - j > reach
+    return deep
+
+
+@njit(nogil=True, cache=True)
+def add_pairs(points, classes, row_low, row_high, factor, out):
+    """Add `factor` times the weights of all unordered pairs whose first point lies in these rows.
+
+    `out` is (classes, 3): sums of w/d, w and w d. Coincident pairs are counted
+    in w alone: their distance is zero.
+    """
+    x, y, weight, first, columns = points.x, points.y, points.weight, points.first, points.columns
+    weighted = weight.size > 0
+    last = classes.squared[-1]
+    # squared distances of a run of candidates, and which of them are near enough
+    near_d2 = np.empty(1024)
+    near_k = np.empty(1024, np.int32)
+    for j in range(row_low, min(row_high, points.rows)):
+        for i in range(columns):
+            c = j * columns + i
+            for a in range(first[c], first[c + 1]):
+                ax, ay = x[a], y[a]
+                for up in range(FINE + 1):
+                    jj = j + up
+                    if jj >= points.rows:
+                        break
+                    if up == 0:
+                        run = a + 1
+                    else:
+                        run = first[jj * columns + max(i - FINE, 0)]
+                    end = first[jj * columns + min(i + FINE, columns - 1) + 1]
+                    while run < end:
+                        stop = min(end, run + 1024)
+                        found = 0
+                        for b in range(run, stop):
+                            dx = x[b] - ax
+                            dy = y[b] - ay
+                            d2 = dx * dx + dy * dy
+                            near_d2[found] = d2
+                            near_k[found] = b
+                            found += 1 if d2 <= last else 0
+                        for h in range(found):
+                            d2 = near_d2[h]
+                            d = np.sqrt(d2)
+                            w = factor * weight[a] * weight[near_k[h]] if weighted else factor
+                            k = classes.guess[int(d * classes.scale)]
+                            while d2 > classes.squared[k]:
+                                k += 1
+                            if d2 > 0.0:
+                                out[k, 0] += w / d
+                            out[k, 1] += w
+                            out[k, 2] += w * d
+                        run = stop
+
+
+@njit(nogil=True, cache=True)
+def distance_capped(grid, px, py, limit):
+    """Distance to the boundary, capped; scans the few cells within `limit`."""
+    reach = limit + 0.5 * grid.cell
+    i_low = max(int(np.floor((px - reach - grid.left) / grid.cell)), 0)
+    i_high = min(int(np.floor((px + reach - grid.left) / grid.cell)), grid.columns - 1)
+    j_low = max(int(np.floor((py - reach - grid.bottom) / grid.cell)), 0)
+    j_high = min(int(np.floor((py + reach - grid.bottom) / grid.cell)), grid.rows - 1)
+    best = limit * limit
+    for j in range(j_low, j_high + 1):
+        base = j * grid.columns
+        for k in range(grid.first[base + i_low], grid.first[base + max(i_high, i_low - 1) + 1]):
+            ax, ay = grid.x0[k] - px, grid.y0[k] - py
+            dx, dy = grid.x1[k] - px - ax, grid.y1[k] - py - ay
+            t = min(max(-(ax * dx + ay * dy) / (dx * dx + dy * dy), 0.0), 1.0)
+            ex, ey = ax + t * dx, ay + t * dy
+            d2 = ex * ex + ey * ey
+            if d2 < best:
+                best = d2
+    return np.sqrt(best)
+
+
+@njit(nogil=True, cache=True)
+def fill_depths(grid, deep, x, y, limit, out):
+    """Distance of points to the boundary, capped at `limit`."""
+    for k in range(x.size):
+        i = int((x[k] - grid.left) / grid.cell)
+        j = int((y[k] - grid.bottom) / grid.cell)
+        if 0 <= i < grid.columns and 0 <= j < grid.rows and deep[j * grid.columns + i]:
+            out[k] = limit
+        else:
+            out[k] = distance_capped(grid, x[k], y[k], limit)
+
+
+@njit(nogil=True, cache=True)
+def add_isotropic_excess(points, grid, classes, row_low, row_high, out):
+    """Add (1/share - 1) for every ordered pair whose first point is near the boundary."""
+    x, y, weight, first, columns = points.x, points.y, points.weight, points.first, points.columns
+    weighted = weight.size > 0
+    last = classes.squared[-1]
+    largest = np.sqrt(last)
+    room = 256
+    local = np.empty((4, room))
+    reach = largest + 0.5 * grid.cell
+    for j in range(row_low, min(row_high, points.rows)):
+        for i in range(columns):
+            c = j * columns + i
+            for a in range(first[c], first[c + 1]):
+                if points.depth[a] >= largest:
+                    continue
+                ax, ay = x[a], y[a]
+                depth2 = points.depth[a] * points.depth[a]
+                # pieces within reach of the largest circle, once for all neighbours
+                pieces = 0
+                i_low = max(int(np.floor((ax - reach - grid.left) / grid.cell)), 0)
+                i_high = min(int(np.floor((ax + reach - grid.left) / grid.cell)), grid.columns - 1)
+                j_low = max(int(np.floor((ay - reach - grid.bottom) / grid.cell)), 0)
+                j_high = min(int(np.floor((ay + reach - grid.bottom) / grid.cell)), grid.rows - 1)
+                for gj in range(j_low, j_high + 1):
+                    base = gj * grid.columns
+                    k_low, k_high = grid.first[base + i_low], grid.first[base + i_high + 1]
+                    if pieces + k_high - k_low > room:
+                        grown = np.empty((4, 2 * (pieces + k_high - k_low)))
+                        grown[:, :pieces] = local[:, :pieces]
+                        local = grown
+                        room = local.shape[1]
+                    for k in range(k_low, k_high):
+                        ex0, ey0 = grid.x0[k] - ax, grid.y0[k] - ay
+                        ex1, ey1 = grid.x1[k] - ax, grid.y1[k] - ay
+                        ux, uy = ex1 - ex0, ey1 - ey0
+                        t = -(ex0 * ux + ey0 * uy) / (ux * ux + uy * uy)
+                        t = min(max(t, 0.0), 1.0)
+                        px, py = ex0 + t * ux, ey0 + t * uy
+                        if px * px + py * py < last:
+                            local[0, pieces] = ex0
+                            local[1, pieces] = ey0
+                            local[2, pieces] = ex1
+                            local[3, pieces] = ey1
+                            pieces += 1
+                for jj in range(max(j - FINE, 0), min(j + FINE, points.rows - 1) + 1):
+                    run = first[jj * columns + max(i - FINE, 0)]
+                    end = first[jj * columns + min(i + FINE, columns - 1) + 1]
+                    for b in range(run, end):
+                        dx, dy = x[b] - ax, y[b] - ay
+                        d2 = dx * dx + dy * dy
+                        if d2 > last or d2 <= depth2 or a == b:
+                            continue
+                        d = np.sqrt(d2)
+                        re, im, crossings = 1.0, 0.0, 0
+                        for k in range(pieces):
+                            re, im, more = cross_piece(
+                                local[0, k], local[1, k], local[2, k], local[3, k], d2, re, im
+                            )
+                            crossings += more
+                        share = share_from_product(grid, ax, ay, d, re, im, crossings)
+                        if share <= 0.0:
+                            # the neighbour lies on this circle and in W: only rounding brings us here
+                            continue
+                        w = 1.0 / share - 1.0
+                        if weighted:
+                            w *= weight[a] * weight[b]
+                        k = classes.guess[int(d * classes.scale)]
+                        while d2 > classes.squared[k]:
+                            k += 1
+                        if d2 > 0.0:
+                            out[k, 0] += w / d
+                        out[k, 1] += w
+                        out[k, 2] += w * d

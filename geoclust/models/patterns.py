@@ -1,0 +1,58 @@
+"""Draw patterns of a model, or of complete randomness, inside a study area."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from geoclust.area.study_area import Floats, StudyArea
+from geoclust.models.base import ClusterModel
+
+# expected number of points missed because their centre lies too far outside
+MISSED = 1e-9
+
+
+@dataclass(frozen=True, eq=False)
+class Pattern:
+    """A drawn pattern with the centres behind it; local coordinates of the study area.
+
+    Attributes
+    ----------
+    points
+        (n, 2) inside the study area.
+    centres
+        (m, 2) all centres drawn, those outside the boundary included.
+    cluster
+        (n,) row of the centre of each point.
+    """
+
+    points: Floats
+    centres: Floats
+    cluster: npt.NDArray[np.int64]
+
+
+def draw_pattern(model: ClusterModel, area: StudyArea, rng: np.random.Generator) -> Pattern:
+    """Draw one pattern, offspring of centres outside the study area included.
+
+    Centres are drawn in the study area widened so far that fewer than 1e-9
+    points are expected to be missed: the expected number of points with a
+    centre further out is at most intensity times area times the share of
+    offspring beyond that distance.
+    """
+    expected = model.intensity * area.area
+    distance = model.reach(min(MISSED / max(expected, MISSED), 0.5))
+    wide = area.dilated(distance)
+    number = int(rng.poisson(model.parent_intensity * wide.area))
+    centres = wide.local_uniform_points(number, rng) + (wide.origin - area.origin)
+    sizes = rng.poisson(model.mean_offspring, number)
+    cluster = np.repeat(np.arange(number), sizes)
+    points = centres[cluster] + model.draw_offsets(len(cluster), rng)
+    kept = area.local_contains(points)
+    return Pattern(np.ascontiguousarray(points[kept]), centres, cluster[kept])
+
+
+def draw_random_points(intensity: float, area: StudyArea, rng: np.random.Generator) -> Floats:
+    """Draw a completely random pattern (Poisson number of points), local coordinates."""
+    return area.local_uniform_points(int(rng.poisson(intensity * area.area)), rng)
