@@ -71,7 +71,6 @@ def _parse(name: str) -> pd.DataFrame:
             sep=separator,
             encoding="utf-8-sig",
             skipinitialspace=True,
-            float_precision="round_trip",
             index_col=False,
         )
     except UnicodeDecodeError as error:
