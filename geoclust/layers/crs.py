@@ -117,7 +117,12 @@ def is_local(crs: pyproj.CRS) -> bool:
 def label(crs: pyproj.CRS) -> str:
     """Name of a CRS for people, with its authority code where there is one."""
     authority = crs.to_authority(min_confidence=100)
-    name = crs.name if crs.name not in ("unknown", "unnamed", "") else f"unnamed {crs.type_name}"
+    name = crs.name
+    if name in ("unknown", "unnamed", ""):
+        method = (
+            crs.coordinate_operation.method_name if crs.coordinate_operation is not None else crs.type_name
+        )
+        name = f"unnamed CRS, {method}"
     return f"{name} ({authority[0]}:{authority[1]})" if authority else name
 
 
@@ -157,8 +162,17 @@ def _registered_twin(made: pyproj.CRS, name: str) -> pyproj.CRS | None:
     return None
 
 
-def require_plausible(bounds: np.ndarray, crs: pyproj.CRS, what: str) -> None:
+def require_plausible(xy: np.ndarray, crs: pyproj.CRS, what: str) -> None:
     """Refuse coordinates that cannot be degrees although their CRS says so.
+
+    Parameters
+    ----------
+    xy
+        (k, 2) coordinates as recorded.
+    crs
+        What they are said to be in; only geographic ones are looked at.
+    what
+        Names the layer in the message.
 
     Raises
     ------
@@ -167,11 +181,12 @@ def require_plausible(bounds: np.ndarray, crs: pyproj.CRS, what: str) -> None:
     if not crs.is_geographic:
         return
     quarter = np.pi / 2 / crs.axis_info[0].unit_conversion_factor
-    if max(abs(bounds[1]), abs(bounds[3])) > quarter or max(abs(bounds[0]), abs(bounds[2])) > 4 * quarter:
+    wrong = (np.abs(xy[:, 1]) > quarter) | (np.abs(xy[:, 0]) > 4 * quarter)
+    if wrong.any():
+        x, y = xy[np.argmax(wrong)]
         raise InputError(
-            f"{what} is said to be in degrees ({label(crs)}), but its coordinates reach "
-            f"x {bounds[0]:g} to {bounds[2]:g}, y {bounds[1]:g} to {bounds[3]:g}: give the layer the CRS "
-            f"it was measured in, or put longitude before latitude"
+            f"{what} is said to be in degrees ({label(crs)}), but has coordinates such as x {x:.10g}, y "
+            f"{y:.10g}: give the layer the CRS it was measured in, or put longitude before latitude"
         )
 
 
@@ -407,7 +422,11 @@ def datum_step(
         "between the two; give both layers the same CRS"
     )
     if is_local(source) or is_local(target):
-        raise InputError(problem)
+        if not (is_local(source) and is_local(target) and in_metres(source).equals(target)):
+            raise InputError(problem)
+        metre = source.axis_info[0].unit_conversion_factor
+        scaling = pyproj.Transformer.from_pipeline(f"+proj=affine +s11={metre!r} +s22={metre!r}")
+        return DatumStep(scaling, None, 0.0)
     same_datum = geodetic_of(source).equals(geodetic_of(target), ignore_axis_order=True)
     around = None
     if centre is not None:

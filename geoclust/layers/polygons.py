@@ -201,8 +201,8 @@ def unwrap_longitudes(parts: Parts, crs: pyproj.CRS, what: str) -> tuple[Parts, 
     if len(steps) and steps.max() > half:
         raise InputError(
             f"{what} has an edge across more than 180° of longitude, as when degrees jump at the "
-            "antimeridian, so that nobody can tell which way round it goes: cut the polygon into two parts at 180° (as "
-            "GeoJSON asks), or give it in a projected CRS"
+            "antimeridian, so that nobody can tell which way round it goes: cut the polygon into two parts "
+            "at 180° (as GeoJSON asks), or give it in a projected CRS"
         )
     if np.ptp(xy[:, 0]) <= half:
         return parts, False
