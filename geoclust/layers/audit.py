@@ -178,8 +178,8 @@ class Audit:
                 lattice.axis
             )
         clauses = [f"{spacing} in {' and '.join(axes)}{share}" for (spacing, share), axes in grouped.items()]
-        known = self.lattice_m is None or self.lattice_unit in ("metre", "meter", "Meter")
-        metres = "" if known else f"; that is {length_text(self.lattice_m)}"
+        in_metres = self.lattice_unit.lower() in ("metre", "meter")
+        metres = "" if self.lattice_m is None or in_metres else f"; that is {length_text(self.lattice_m)}"
         return f"coordinates recorded to {', '.join(clauses)}{metres}"
 
     def _area_lines(self) -> list[str]:
