@@ -64,6 +64,54 @@ def results_folder(
     known = {*RESULT_FILES, *STYLE_FILES, *known_files}
     _tidy_up(target)
     _check(target, out, overwrite, known)
+    with _beside(target, out) as partial:
+        yield partial
+        _flush(partial)
+        # again: somebody may have put something there in the meantime
+        _check(target, out, overwrite, known)
+        try:
+            _put_in_place(partial, target)
+        except OSError as error:
+            raise OutputError(f"{out} cannot be put in place: {error.strerror}; nothing was kept.") from error
+        _flush_folder(target.parent)
+
+
+@contextmanager
+def results_file(out: str | Path, overwrite: bool = False) -> Iterator[Path]:
+    """Give a file name to write to, which becomes `out` when the block ends well.
+
+    Parameters
+    ----------
+    out
+        File that will hold the result. The folder that it lies in must exist.
+    overwrite
+        Whether a file that is there already may be replaced.
+
+    Yields
+    ------
+    Path
+        The same name in a new hidden folder beside `out`. On any exception, an
+        interrupt included, that folder is removed and `out` stays as it was.
+
+    Raises
+    ------
+    OutputError
+        If `out` cannot be written, exists already, or is a folder.
+    """
+    target = _target(out)
+    _tidy_up(target)
+    _check_file(target, out, overwrite)
+    with _beside(target, out) as partial:
+        yield partial / target.name
+        _flush(partial)
+        _check_file(target, out, overwrite)
+        (partial / target.name).replace(target)
+        _flush_folder(target.parent)
+
+
+@contextmanager
+def _beside(target: Path, out: str | Path) -> Iterator[Path]:
+    """Make a hidden folder beside the target, removed in the end; a full disk is said in a sentence."""
     partial = target.with_name(_hidden_name(target, "partial"))
     try:
         try:
@@ -74,21 +122,24 @@ def results_folder(
             ) from error
         try:
             yield partial
-            _flush(partial)
         except OSError as error:
             if error.errno not in _DISK_FULL:
                 raise
             raise OutputError(f"{out} cannot be written: {error.strerror}; nothing was kept.") from error
-        # again: somebody may have put something there in the meantime
-        _check(target, out, overwrite, known)
-        try:
-            _put_in_place(partial, target)
-        except OSError as error:
-            raise OutputError(f"{out} cannot be put in place: {error.strerror}; nothing was kept.") from error
-        _flush_folder(target.parent)
     finally:
         # not there any more after success, unless it holds the old results by now
         shutil.rmtree(partial, ignore_errors=True)
+
+
+def _check_file(target: Path, out: str | Path, overwrite: bool) -> None:
+    """Refuse to replace a file unasked, or one that is open elsewhere."""
+    if target.is_dir():
+        raise OutputError(f"{out} is a folder, not a file; choose another name.")
+    if os.path.lexists(target) and not overwrite:
+        raise OutputError(f"{out} exists already; choose another name, or pass overwrite.")
+    # the log of the old database would be taken for the new one's
+    if target.with_name(target.name + "-wal").exists() or target.with_name(target.name + "-journal").exists():
+        raise OutputError(f"{out} is in use by another program; close it there, or choose another name.")
 
 
 def _target(out: str | Path) -> Path:
