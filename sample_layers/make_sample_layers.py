@@ -1,8 +1,7 @@
 """Make the sample layers: wood-ant nest mounds in an invented upland forest reserve.
 
-Nothing here was surveyed. Terrain, reserve and mounds are drawn from a seeded
-generator, so that the centres of the clusters are known and anyone can see how
-well a map finds them. Run it again with
+Nothing here was surveyed: all is drawn from a seeded generator, so that the centres
+of the clusters are known and anyone can see how well a map finds them. Run
 
     python sample_layers/make_sample_layers.py [FOLDER]
 
@@ -24,6 +23,7 @@ import shapely
 from shapely.geometry import LineString, MultiPolygon, Polygon, box
 
 SEED = 20260514
+DATE = "2026-06-30"  # that the files carry inside: with today's, no two runs would give the same bytes
 CRS = "EPSG:25832"
 ORIGIN = np.array([604_000.0, 5_737_000.0])  # middle of the reserve: easting, northing
 CELL = 10.0  # metres, both rasters
@@ -142,12 +142,13 @@ class Outlines:
     unwalked: Polygon
 
 
-def shore_point(block: Polygon, outward: np.ndarray) -> np.ndarray:
-    """Find the outermost place where a ray from ORIGIN crosses the outline."""
-    crossings = block.exterior.intersection(LineString([ORIGIN, ORIGIN + 3000 * outward]))
-    return max(
-        (np.array(point.coords[0]) for point in shapely.get_parts(crossings)), key=lambda p: outward @ p
+def shore_point(block: Polygon, bearing: float, beyond: float) -> np.ndarray:
+    """Find the outermost place where a ray from ORIGIN crosses the outline, and go `beyond` it."""
+    outward = np.array([np.cos(bearing), np.sin(bearing)])
+    crossings = shapely.get_coordinates(
+        block.exterior.intersection(LineString([ORIGIN, ORIGIN + 3000 * outward]))
     )
+    return crossings[np.argmax(crossings @ outward)] + beyond * outward
 
 
 def draw_outlines(rng: np.random.Generator) -> Outlines:
@@ -155,13 +156,10 @@ def draw_outlines(rng: np.random.Generator) -> Outlines:
     main = blob((0.0, 0.0), (860.0, 720.0), 0.16, rng)
     inlets = [(0.9, 330, 75), (2.3, 420, 90), (3.6, 260, 60), (4.5, 380, 80), (5.5, 240, 55)]
     for bearing, length, width in inlets:
-        outward = np.array([np.cos(bearing), np.sin(bearing)])
-        mouth = shore_point(main, outward) + 15 * outward
+        mouth = shore_point(main, bearing, 15.0)
         main = solid(main.difference(tongue(mouth, bearing + np.pi, length, width, rng)))
     for bearing, length, width in [(1.6, 200, 70), (2.9, 260, 80), (5.0, 220, 60)]:  # spits
-        outward = np.array([np.cos(bearing), np.sin(bearing)])
-        root = shore_point(main, outward) - 15 * outward
-        main = solid(main.union(tongue(root, bearing, length, width, rng)))
+        main = solid(main.union(tongue(shore_point(main, bearing, -15.0), bearing, length, width, rng)))
     parcel = solid(blob((-1010.0, -770.0), (230.0, 170.0), 0.13, rng).difference(main.buffer(60.0)))
     tarns = [blob((-230.0, 170.0), (115.0, 80.0), 0.10, rng), blob((290.0, -150.0), (85.0, 110.0), 0.10, rng)]
     filled = MultiPolygon([main, parcel])
@@ -381,7 +379,8 @@ def write_layer(path: Path, layer: gpd.GeoDataFrame, driver: str, name: str | No
     kinds |= {"survey_date": "date", "surveyed": "date"}
     schema = gpd.io.file.infer_schema(layer)
     schema["properties"] = {field: kinds.get(field, kind) for field, kind in schema["properties"].items()}
-    layer.to_file(path, layer=name, driver=driver, engine="fiona", schema=schema)
+    options = {"DBF_DATE_LAST_UPDATE": DATE} if driver == "ESRI Shapefile" else {}
+    layer.to_file(path, layer=name, driver=driver, engine="fiona", schema=schema, **options)
 
 
 def write_raster(
@@ -429,8 +428,7 @@ def main(folder: Path) -> None:
     centres = centres_layer(nests, outlines.reserve)
 
     folder.mkdir(parents=True, exist_ok=True)
-    # the date that the files carry inside: without it no two runs would give the same bytes
-    with fiona.Env(OGR_CURRENT_DATE="2026-06-30T00:00:00.000Z"):
+    with fiona.Env(OGR_CURRENT_DATE=f"{DATE}T00:00:00.000Z"):
         package = folder / "reserve.gpkg"
         package.unlink(missing_ok=True)
         layers = {
@@ -463,11 +461,10 @@ def describe(
     centres: gpd.GeoDataFrame,
 ) -> str:
     """Write the page about the layers, with the numbers that this run gave."""
-    reserve = outlines.reserve
     x = terrain.west + CELL * (np.arange(terrain.wetness.shape[1]) + 0.5)
     y = terrain.north - CELL * (np.arange(terrain.wetness.shape[0]) + 0.5)
     cells = np.column_stack([grid.ravel() for grid in np.meshgrid(x, y)])
-    retention = float(terrain.retention(cells)[inside(reserve, cells)].mean())
+    retention = float(terrain.retention(cells)[inside(outlines.reserve, cells)].mean())
     count = {
         f"{level}_{place}": int(((centres["level"] == level) & (centres["inside"] == flag)).sum())
         for level in ("outer", "inner")
@@ -484,8 +481,8 @@ def describe(
         mounds=len(mounds),
         zones=len(zones),
         zone_lines=zone_lines,
-        area=reserve.area / 1e4,
-        vertices=shapely.get_num_coordinates(reserve) - len(shapely.get_rings(reserve)),
+        area=outlines.reserve.area / 1e4,
+        vertices=shapely.get_num_coordinates(outlines.reserve) - len(shapely.get_rings(outlines.reserve)),
         unwalked_area=outlines.unwalked.area / 1e4,
         unwalked_mounds=int(inside(outlines.unwalked, nests.mounds).sum()),
         unwalked_inner=int(inside(outlines.unwalked, nests.inner).sum()),

@@ -12,7 +12,7 @@ import pytest
 
 from geoclust.errors import OutputError
 from geoclust.layers import results_folder as module
-from geoclust.layers.results_folder import RESULT_FILES, results_folder
+from geoclust.layers.results_folder import RESULT_FILES, results_file, results_folder
 
 # Writes a folder of which every file holds the same word, and stops itself or waits at a chosen stage.
 CHILD = """
@@ -361,3 +361,39 @@ def test_killed_at_arbitrary_moments(tmp_path):
     assert state(out) == "last"
     assert os.listdir(tmp_path) == ["results"]
     assert False in seen
+
+
+def test_single_file_appears_whole_at_the_end(tmp_path):
+    with results_file(tmp_path / "a.gpkg") as path:
+        path.write_text("new")
+        assert path.name == "a.gpkg"
+        assert not (tmp_path / "a.gpkg").exists()
+    assert (tmp_path / "a.gpkg").read_text() == "new"
+    assert os.listdir(tmp_path) == ["a.gpkg"]
+
+    def fail_in_the_block():
+        with results_file(tmp_path / "a.gpkg", overwrite=True) as path:
+            path.write_text("newer")
+            raise KeyboardInterrupt
+
+    with pytest.raises(KeyboardInterrupt):
+        fail_in_the_block()
+    assert (tmp_path / "a.gpkg").read_text() == "new"
+    assert os.listdir(tmp_path) == ["a.gpkg"]
+
+
+def test_single_file_is_not_replaced_unasked_nor_while_in_use(tmp_path):
+    (tmp_path / "a.gpkg").write_text("old")
+    (tmp_path / "b").mkdir()
+    (tmp_path / "c.gpkg-wal").write_text("log")
+    for name, overwrite, words in [
+        ("a.gpkg", False, "exists already"),
+        ("b", True, "is a folder"),
+        ("c.gpkg", True, "in use by another program"),
+        ("no/a.gpkg", True, "There is no folder"),
+    ]:
+        with pytest.raises(OutputError, match=words), results_file(tmp_path / name, overwrite):
+            pytest.fail("the block must not run")
+    with results_file(tmp_path / "a.gpkg", overwrite=True) as path:
+        path.write_text("new")
+    assert (tmp_path / "a.gpkg").read_text() == "new"
