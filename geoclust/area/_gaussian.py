@@ -15,7 +15,7 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
-from geoclust.area._edges import is_inside
+from geoclust.area._edges import REFERENCE_X, REFERENCE_Y, is_inside
 
 # exp(-REACH**2 / 2) is below 1e-16
 REACH = 8.6
@@ -34,12 +34,18 @@ def piece_deficit(ax, ay, bx, by, sigma):
         return 0.0
     ux /= length
     uy /= length
-    h = ax * uy - ay * ux
+    # measured from the nearer end: beside a vertex, the angle hangs on the last digits
+    if bx * bx + by * by < ax * ax + ay * ay:
+        h = bx * uy - by * ux
+        tb = bx * ux + by * uy
+        ta = tb - length
+    else:
+        h = ax * uy - ay * ux
+        ta = ax * ux + ay * uy
+        tb = ta + length
     reach = REACH * sigma
     if abs(h) >= reach:
         return 0.0
-    ta = ax * ux + ay * uy
-    tb = ta + length
     span = np.sqrt(reach * reach - h * h)
     t0, t1 = max(ta, -span), min(tb, span)
     if t1 <= t0:
@@ -68,20 +74,42 @@ def gaussian_share(grid, cx, cy, sigma):
     i_high = min(int(np.floor((cx + reach - grid.left) / grid.cell)), grid.columns - 1)
     j_low = max(int(np.floor((cy - reach - grid.bottom) / grid.cell)), 0)
     j_high = min(int(np.floor((cy + reach - grid.bottom) / grid.cell)), grid.rows - 1)
-    share = 1.0 if is_inside(grid, cx, cy) else 0.0
-    if i_low <= i_high:
+    inside = 1.0 if is_inside(grid, cx, cy) else 0.0
+    if i_low > i_high:
+        return inside
+    deficit, met = 0.0, False
+    # on a vertex the angles of its two edges are undefined: a step of a hair tells them
+    for step in range(3):
+        hair = step * (1e-13 * sigma + 4e-16 * (abs(cx) + abs(cy)))
+        px, py = cx + hair * REFERENCE_X, cy + hair * REFERENCE_Y
+        deficit, met, on_vertex = 0.0, False, False
         for j in range(j_low, j_high + 1):
             base = j * grid.columns
             for k in range(grid.first[base + i_low], grid.first[base + i_high + 1]):
-                share -= piece_deficit(
-                    grid.x0[k] - cx, grid.y0[k] - cy, grid.x1[k] - cx, grid.y1[k] - cy, sigma
-                )
-    # a centre exactly on an edge may be counted on either side of it, a whole turn apart
-    if share < -1e-6:
-        share += 1.0
-    elif share > 1.0 + 1e-6:
-        share -= 1.0
-    return min(max(share, 0.0), 1.0)
+                ax, ay = grid.x0[k] - px, grid.y0[k] - py
+                if ax == 0.0 and ay == 0.0:
+                    on_vertex = True
+                more = piece_deficit(ax, ay, grid.x1[k] - px, grid.y1[k] - py, sigma)
+                met = met or more != 0.0
+                deficit += more
+        if not on_vertex:
+            break
+    share = inside - deficit
+    if not met:
+        return inside
+    # close to an edge, rounding may put the centre on either side of it, a whole turn apart
+    share -= np.floor(share)
+    if 1e-6 < share < 1.0 - 1e-6:
+        return share
+    # nearly nothing or nearly all of the mass: points at the scale of sigma tell which
+    votes = 0
+    for k in range(5):
+        t, d = 1.0 + 2.4 * k, sigma * (0.4 + 0.3 * k)
+        if is_inside(grid, cx + d * np.cos(t), cy + d * np.sin(t)):
+            votes += 1
+    if votes >= 3:
+        return share if share > 0.5 else 1.0
+    return share if share < 0.5 else 0.0
 
 
 @njit(nogil=True, cache=True)
