@@ -63,9 +63,10 @@ class Audit:
         Largest |scale - 1| over the study area; None in a local plane.
     points_reprojected, area_reprojected
         Whether their coordinates changed.
-    datum_operation, datum_accuracy_m
-        Operation between different datums, None if there was none, and its stated
-        accuracy, None if unknown.
+    datum_operation, datum_accuracy_m, datum_grid_missing
+        Operation between different datums, None if there was none; its stated
+        accuracy, None if unknown; whether a better one needs a grid file that is not
+        installed.
     outside_area_of_use
         The study area lies far outside the region that its CRS was made for.
     notes
@@ -115,6 +116,7 @@ class Audit:
     area_reprojected: bool
     datum_operation: str | None
     datum_accuracy_m: float | None
+    datum_grid_missing: bool
     outside_area_of_use: bool
     notes: tuple[str, ...] = ()
 
@@ -282,15 +284,18 @@ class Audit:
                 "this the CRS it was measured in?"
             )
         if self.datum_operation is not None:
+            better = (
+                "; a better one needs a grid of PROJ that is not installed" if self.datum_grid_missing else ""
+            )
             if self.datum_accuracy_m is None:
                 found.append(
                     "nobody has stated how accurate the change of datum between the layers is "
-                    f"({self.datum_operation}): they may not fit by many metres"
+                    f"({self.datum_operation}): they may not fit by many metres{better}"
                 )
             elif self.datum_accuracy_m > DATUM_ACCURACY:
                 found.append(
                     f"the change of datum between the layers ({self.datum_operation}) is accurate to "
-                    f"{self.datum_accuracy_m:g} m only"
+                    f"{self.datum_accuracy_m:g} m only{better}"
                 )
         return found
 

@@ -19,6 +19,7 @@ is taken, with a warning.
 from __future__ import annotations
 
 import re
+import warnings
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 
@@ -116,6 +117,8 @@ def is_local(crs: pyproj.CRS) -> bool:
 
 def label(crs: pyproj.CRS) -> str:
     """Name of a CRS for people, with its authority code where there is one."""
+    if crs.is_bound and crs.source_crs is not None:
+        crs = crs.source_crs
     authority = crs.to_authority(min_confidence=100)
     name = crs.name
     if name in ("unknown", "unnamed", ""):
@@ -403,6 +406,7 @@ class DatumStep:
     transformer: pyproj.Transformer
     description: str | None  # None if both have the same datum
     accuracy_m: float | None  # None if nobody stated it
+    grid_missing: bool = False  # a better operation needs a grid file that is not installed
 
 
 def datum_step(
@@ -435,14 +439,17 @@ def datum_step(
     try:
         if same_datum:
             return DatumStep(pyproj.Transformer.from_crs(source, target, always_xy=True), None, 0.0)
-        group = pyproj.transformer.TransformerGroup(
-            source,
-            target,
-            always_xy=True,
-            area_of_interest=around,  # type: ignore[arg-type]
-        )
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore", UserWarning)  # on missing grids, which the audit reports
+            group = pyproj.transformer.TransformerGroup(
+                source,
+                target,
+                always_xy=True,
+                area_of_interest=around,  # type: ignore[arg-type]
+            )
         step = group.transformers[0]
     except (ProjError, IndexError) as error:
         raise InputError(problem) from error
     accuracy = step.accuracy if step.accuracy is not None and step.accuracy >= 0 else None
-    return DatumStep(step, step.description, accuracy)
+    operations = [part for part in (step.description or "").split(" + ") if "axis order change" not in part]
+    return DatumStep(step, " + ".join(operations), accuracy, not group.best_available)

@@ -179,6 +179,7 @@ def read_survey_layers(
         area_reprojected=area_step is not None,
         datum_operation=None if operation is None else operation.description,
         datum_accuracy_m=None if operation is None else operation.accuracy_m,
+        datum_grid_missing=operation is not None and operation.grid_missing,
         outside_area_of_use=centre is not None and systems.outside_area_of_use(own, *centre),
         notes=_notes(point_layer, area_as_read),
     )

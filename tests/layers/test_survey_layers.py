@@ -3,6 +3,7 @@
 import hashlib
 import importlib.util
 import json
+import warnings
 from pathlib import Path
 
 import geopandas as gpd
@@ -289,6 +290,20 @@ def test_different_crs_are_brought_together(tmp_path, package):
     assert survey.audit.scale_error_distance <= 0.001
     reference = read_survey_layers(package, package, points_layer="mounds", area_layer="reserve")
     assert survey.audit.area_ha == pytest.approx(reference.audit.area_ha, rel=0.002)
+
+
+def test_a_rough_change_of_datum_is_a_warning(tmp_path):
+    box = shapely.box(-76.1, 40.0, -76.0, 40.1)
+    lonlat = np.random.default_rng(1).uniform([-76.09, 40.01], [-76.01, 40.09], (30, 2))
+    points = write(gpd.GeoDataFrame(geometry=shapely.points(lonlat), crs=4326), tmp_path / "p.gpkg")
+    area = write(gpd.GeoDataFrame(geometry=[box], crs=4267), tmp_path / "a.gpkg")
+    with warnings.catch_warnings():
+        warnings.simplefilter("error")
+        audit = audit_survey(points, area)
+    # without grids, EPSG states 5 to 10 m for NAD27 to WGS 84
+    assert audit.datum_accuracy_m is None or audit.datum_accuracy_m > 2
+    assert any("change of datum" in warning for warning in audit.warnings)
+    assert "axis order" not in audit.datum_operation
 
 
 def test_a_small_defect_is_repaired_and_reported(tmp_path, package):
