@@ -6,6 +6,8 @@ import csv
 import datetime as dt
 import importlib.util
 import os
+import resource
+import signal
 import sqlite3
 import subprocess
 import sys
@@ -337,9 +339,6 @@ def test_existing_package_is_kept(tmp_path):
 @pytest.fixture
 def small_files():
     """Let no file of this process grow beyond 100 kB, as on a full disk."""
-    resource = pytest.importorskip("resource")
-    import signal
-
     before, handler = resource.getrlimit(resource.RLIMIT_FSIZE), signal.signal(signal.SIGXFSZ, signal.SIG_IGN)
     resource.setrlimit(resource.RLIMIT_FSIZE, (100_000, before[1]))
     yield
