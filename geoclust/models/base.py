@@ -15,6 +15,7 @@ from typing import ClassVar
 import numpy as np
 import numpy.typing as npt
 
+from geoclust.area.study_area import StudyArea
 from geoclust.errors import not_allowed
 
 Floats = npt.NDArray[np.float64]
@@ -39,6 +40,12 @@ class ClusterModel(ABC):
     name: ClassVar[str]
     source: ClassVar[str]
     described: ClassVar[tuple[Parameter, ...]]
+    scale_name: ClassVar[str]
+    # what the samplers need: the code of the kernel in their compiled loops, where they cut it
+    # off, and how far outside the study area a centre may still matter, both in scales
+    kernel_code: ClassVar[int]
+    reach_in_scales: ClassVar[float]
+    margin_in_scales: ClassVar[float]
 
     parent_intensity: float
     mean_offspring: float
@@ -79,6 +86,11 @@ class ClusterModel(ABC):
     @abstractmethod
     def sibling_distribution(self, r: npt.ArrayLike) -> Floats:
         """H(r): probability that two siblings are at most r apart."""
+
+    @staticmethod
+    @abstractmethod
+    def area_shares(area: StudyArea, centres: Floats, scale: float) -> Floats:
+        """Share of the offspring of centres (n, 2, local coordinates) that fall in the study area."""
 
     def pair_correlation(self, r: npt.ArrayLike) -> Floats:
         """g(r) = 1 + h(r)/rho."""

@@ -8,6 +8,7 @@ from typing import ClassVar
 import numpy as np
 import numpy.typing as npt
 
+from geoclust.area.study_area import StudyArea
 from geoclust.models.base import ClusterModel, Floats, Parameter
 
 
@@ -46,6 +47,13 @@ class Thomas(ClusterModel):
         Parameter("mean_offspring", "1", "mean number of points per cluster"),
     )
 
+    scale_name: ClassVar[str] = "sigma"
+    kernel_code: ClassVar[int] = 0
+    # beyond six sigma lie 1.5e-8 of the offspring
+    reach_in_scales: ClassVar[float] = 6.0
+    # beyond 4.5 sigma lie 4e-5 of them
+    margin_in_scales: ClassVar[float] = 4.5
+
     def offspring_density(self, r: npt.ArrayLike) -> Floats:
         s2 = self.sigma**2
         return np.exp(-(np.asarray(r, dtype=np.float64) ** 2) / (2 * s2)) / (2 * np.pi * s2)
@@ -62,3 +70,7 @@ class Thomas(ClusterModel):
 
     def sibling_distribution(self, r: npt.ArrayLike) -> Floats:
         return -np.expm1(-(np.asarray(r, dtype=np.float64) ** 2) / (4 * self.sigma**2))
+
+    @staticmethod
+    def area_shares(area: StudyArea, centres: Floats, scale: float) -> Floats:
+        return area.gaussian_shares(centres + area.origin, scale, workers=1)

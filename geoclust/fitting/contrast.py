@@ -1,0 +1,187 @@
+"""Minimum contrast: the model whose curve is nearest to the survey's.
+
+Diggle & Gratton (1984), Journal of the Royal Statistical Society B 46:
+193-227: minimise the integral of |T̂(r)^q - T(r; theta)^q|² over a range of r.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+from scipy.optimize import least_squares
+
+from geoclust.errors import not_allowed
+from geoclust.models.base import ClusterModel
+
+Floats = npt.NDArray[np.float64]
+
+FUNCTIONS = ("g", "K")
+# variance-stabilising powers: Diggle 1983 for K; for g the square root, by the same reasoning
+EXPONENTS = {"K": 0.25, "g": 0.5}
+# nodes of the contrast surface in parent intensity and scale
+SURFACE = (61, 61)
+
+
+@dataclass(frozen=True, eq=False)
+class ContrastSurface:
+    """The contrast over parent intensity and scale: a flat valley in it means the data cannot tell.
+
+    Attributes
+    ----------
+    parent_intensities
+        (a,) per square metre, equal steps of the logarithm.
+    scales
+        (b,) metres, equal steps of the logarithm.
+    scale_name
+        Name of the scale parameter, such as ``sigma``.
+    contrast
+        (a, b) contrast at each pair, in units of its minimum over the surface.
+    """
+
+    parent_intensities: Floats
+    scales: Floats
+    scale_name: str
+    contrast: Floats
+
+
+@dataclass(frozen=True, eq=False)
+class ContrastFit:
+    """Result of one minimisation.
+
+    Attributes
+    ----------
+    model
+        The fitted model.
+    value
+        The contrast at the minimum.
+    bounds
+        Lower and upper bound of each searched parameter.
+    on_bound
+        Names of parameters that ended on a bound.
+    surface
+        Contrast surface in absolute units.
+    """
+
+    model: ClusterModel
+    value: float
+    bounds: dict[str, tuple[float, float]]
+    on_bound: tuple[str, ...]
+    surface: ContrastSurface
+
+
+@dataclass(frozen=True, eq=False)
+class Contrast:
+    """What is compared: a curve, the power, the weight of each radius."""
+
+    function: str
+    radii: Floats
+    values: Floats
+    exponent: float
+
+    @property
+    def _target(self) -> Floats:
+        return np.maximum(self.values, 0.0) ** self.exponent
+
+    @property
+    def _root_weights(self) -> Floats:
+        """Square root of the trapezoid weights, none where the curve is not known."""
+        steps = np.gradient(self.radii)
+        return np.where(np.isfinite(self.values), np.sqrt(steps), 0.0)
+
+    def residuals(self, curve: Floats) -> Floats:
+        """(..., k) weighted differences of powers between a model's curve and the survey's."""
+        target = np.where(np.isfinite(self.values), self._target, 0.0)
+        return np.asarray(self._root_weights * (np.maximum(curve, 0.0) ** self.exponent - target))
+
+    def curve_of(self, model: ClusterModel) -> Floats:
+        """The model's curve at the radii."""
+        return model.pair_correlation(self.radii) if self.function == "g" else model.k_function(self.radii)
+
+    def excess_of(self, model: ClusterModel) -> tuple[Floats, Floats]:
+        """Curve of randomness and the model's excess over it, to be divided by the parent intensity."""
+        if self.function == "g":
+            return np.ones_like(self.radii), model.sibling_density(self.radii)
+        return np.pi * self.radii**2, model.sibling_distribution(self.radii)
+
+
+def fit_contrast(
+    kind: type[ClusterModel],
+    contrast: Contrast,
+    intensity: float,
+    area: float,
+) -> ContrastFit:
+    """Fit a model with one scale parameter by minimum contrast.
+
+    The surface over parent intensity and scale is computed first; every local
+    minimum of it, at most four, is the start of a least-squares search in
+    logarithms.
+
+    Parameters
+    ----------
+    kind
+        A model class with parameters parent intensity, one scale in metres, mean offspring.
+    contrast
+        The survey's curve with range and power.
+    intensity
+        Points per square metre; mean offspring follows from it.
+    area
+        Area of the study area, m², which bounds the parent intensity.
+    """
+    scale_name = next(p.name for p in kind.described if p.unit == "m")
+    # from a tenth of a centre in the study area to ten centres a point
+    low = np.log([0.1 / area, max(contrast.radii[0], contrast.radii[-1] / 200.0)])
+    high = np.log([10.0 * intensity, 2.0 * contrast.radii[-1]])
+
+    def model_at(theta: Floats) -> ClusterModel:
+        rho, scale = np.exp(theta)
+        return kind(parent_intensity=rho, mean_offspring=intensity / rho, **{scale_name: scale})
+
+    def residuals(theta: Floats) -> Floats:
+        return contrast.residuals(contrast.curve_of(model_at(theta)))
+
+    rhos = np.linspace(low[0], high[0], SURFACE[0])
+    scales = np.linspace(low[1], high[1], SURFACE[1])
+    grid = np.empty(SURFACE)
+    for b, scale in enumerate(scales):
+        base, excess = contrast.excess_of(model_at(np.array([rhos[0], scale])))
+        grid[:, b] = np.sum(contrast.residuals(base + excess / np.exp(rhos)[:, None]) ** 2, axis=1)
+
+    best: tuple[float, Floats] | None = None
+    for a, b in _valleys(grid)[:4]:
+        found = least_squares(
+            residuals, np.array([rhos[a], scales[b]]), bounds=(low, high), xtol=1e-10, ftol=1e-12
+        )
+        if best is None or 2 * found.cost < best[0]:
+            best = (2 * float(found.cost), found.x)
+    assert best is not None
+    value, theta = best
+    names = ("parent_intensity", scale_name)
+    near = 1e-3
+    on_bound = tuple(n for n, t, lo, hi in zip(names, theta, low, high, strict=True)
+                     if t - lo < near or hi - t < near)  # fmt: skip
+    bounds = {n: (float(np.exp(lo)), float(np.exp(hi))) for n, lo, hi in zip(names, low, high, strict=True)}
+    surface = ContrastSurface(np.exp(rhos), np.exp(scales), scale_name, grid)
+    return ContrastFit(model_at(theta), value, bounds, on_bound, surface)
+
+
+def _valleys(grid: Floats) -> list[tuple[int, int]]:
+    """Local minima of a surface, the deepest first."""
+    padded = np.pad(grid, 1, constant_values=np.inf)
+    least = np.ones(grid.shape, dtype=bool)
+    rows, columns = grid.shape
+    for i in range(3):
+        for j in range(3):
+            if (i, j) != (1, 1):
+                least &= grid <= padded[i : i + rows, j : j + columns]
+    found = np.argwhere(least)
+    order = np.argsort(grid[least])
+    return [(int(a), int(b)) for a, b in found[order]]
+
+
+def checked_function(function: str) -> str:
+    """Return the name of the curve to fit on, or say which are legal."""
+    if function not in FUNCTIONS:
+        raise not_allowed("function", FUNCTIONS, function)
+    return function

@@ -1,0 +1,267 @@
+"""Minimum contrast fit of a survey, with its bootstrap and its verdict."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from geoclust.area.study_area import StudyArea
+from geoclust.area.survey import Survey
+from geoclust.curves.curve import Curve
+from geoclust.curves.envelopes import global_envelope
+from geoclust.curves.second_order import SecondOrder, default_bandwidth
+from geoclust.errors import GeoclustError, not_allowed
+from geoclust.fitting import status as verdicts
+from geoclust.fitting.contrast import EXPONENTS, Contrast, ContrastFit, checked_function, fit_contrast
+from geoclust.fitting.result import ClusterFit
+from geoclust.models.base import ClusterModel
+from geoclust.models.patterns import draw_pattern
+from geoclust.workers import in_order
+
+Floats = npt.NDArray[np.float64]
+Progress = Callable[[str, int, int], None]
+
+NODES = 128
+# K gathers the noise of all shorter distances, so its range follows the clusters; g does not
+RANGE_IN_SCALES = {"K": 6.0, "g": 12.0}
+
+
+@dataclass(frozen=True)
+class ContrastChoices:
+    """How a contrast is taken: the curve, its range and power, the bandwidth of g.
+
+    Attributes
+    ----------
+    function
+        ``g`` or ``K``.
+    r_max
+        Largest distance in metres; found from a first fit if None.
+    r_min
+        Smallest distance in metres; the bandwidth for g, zero for K if None.
+    exponent
+        Power of the curve; ½ for g and ¼ for K if None.
+    bandwidth
+        Half width of the kernel of g in metres; 0.15 mean spacings if None.
+    """
+
+    function: str = "g"
+    r_max: float | None = None
+    r_min: float | None = None
+    exponent: float | None = None
+    bandwidth: float | None = None
+
+    def __post_init__(self) -> None:
+        checked_function(self.function)
+        for name in ("r_max", "exponent", "bandwidth"):
+            value = getattr(self, name)
+            if value is not None and not (np.isfinite(value) and value > 0):
+                raise not_allowed(name, "a positive number", value)
+        if self.r_min is not None and not 0 <= self.r_min < (self.r_max or np.inf):
+            raise not_allowed("r_min", "not negative and below r_max", self.r_min)
+
+
+@dataclass(frozen=True, eq=False)
+class MomentFit:
+    """A contrast fit with the curve it was fitted on."""
+
+    fit: ContrastFit
+    contrast: Contrast
+    bandwidth: float
+    r_max: float
+
+
+def fit_points(
+    kind: type[ClusterModel],
+    local_xy: Floats,
+    area: StudyArea,
+    choices: ContrastChoices,
+    workers: int | None = 1,
+) -> MomentFit:
+    """Fit a model to points in local coordinates; the range follows the clusters unless it is set."""
+    widest = 0.25 * float(np.sqrt(area.area))
+    r_max = choices.r_max if choices.r_max is not None else widest
+    found = _fit_range(kind, local_xy, area, choices, r_max, workers)
+    if choices.r_max is None:
+        scale = next(v for p, v in _scales(found.fit.model))
+        shorter = RANGE_IN_SCALES[choices.function] * scale
+        if shorter < 0.8 * widest:
+            r_max = max(shorter, 4.0 * found.bandwidth)
+            found = _fit_range(kind, local_xy, area, choices, r_max, workers)
+    return found
+
+
+def _scales(model: ClusterModel) -> list[tuple[str, float]]:
+    return [(p.name, model.parameters[p.name]) for p in model.described if p.unit == "m"]
+
+
+def _fit_range(
+    kind: type[ClusterModel],
+    local_xy: Floats,
+    area: StudyArea,
+    choices: ContrastChoices,
+    r_max: float,
+    workers: int | None,
+) -> MomentFit:
+    intensity = len(local_xy) / area.area
+    width = choices.bandwidth if choices.bandwidth is not None else default_bandwidth(intensity)
+    r_min = choices.r_min if choices.r_min is not None else (width if choices.function == "g" else 0.0)
+    r_min = min(r_min, 0.5 * r_max)
+    radii = np.linspace(r_min, r_max, NODES + 1)
+    radii = radii[1:] if radii[0] == 0 else radii
+    g = choices.function == "g"
+    measured = SecondOrder.of_points(local_xy, area, radii, width if g else None, workers=workers)
+    values = measured.g_values() if g else measured.k_values()
+    exponent = choices.exponent if choices.exponent is not None else EXPONENTS[choices.function]
+    contrast = Contrast(choices.function, radii, values, exponent)
+    return MomentFit(fit_contrast(kind, contrast, intensity, area.area), contrast, width, r_max)
+
+
+def fit_by_contrast(
+    survey: Survey,
+    kind: type[ClusterModel],
+    *,
+    choices: ContrastChoices,
+    bootstrap: int,
+    rng: np.random.Generator,
+    workers: int | None = None,
+    progress: Progress | None = None,
+) -> ClusterFit:
+    """Fit by minimum contrast, with a parametric bootstrap interval and a verdict.
+
+    The bootstrap draws patterns from the fit in the same study area and repeats
+    the whole procedure, choice of range included; the interval of each
+    parameter is that of the middle 95 % of the refitted values.
+    """
+    test_seed, boot_seed = rng.spawn(2)
+    if survey.n < verdicts.FEWEST_POINTS:
+        reason = verdicts.sentence("too-few-points", n=survey.n, fewest=verdicts.FEWEST_POINTS)
+        raise CannotFit("too-few-points", reason)
+    found = fit_points(kind, survey.local_xy, survey.area, choices, workers)
+    p_value = _clustering_p_value(survey, found.r_max, test_seed, workers, progress)
+    draws = _bootstrap(kind, found.fit.model, survey.area, choices, bootstrap, boot_seed, workers, progress)
+    intervals = {
+        name: (float(np.quantile(v, 0.025)), float(np.quantile(v, 0.975)))
+        for name, v in draws.items()
+        if len(v) >= 39
+    }
+    status, reason = _verdict(survey, found, p_value, intervals)
+    contrast = found.contrast
+    theory = np.ones_like(contrast.radii) if contrast.function == "g" else np.pi * contrast.radii**2
+    curve = Curve(
+        contrast.function, contrast.radii, contrast.values, theory,
+        "1" if contrast.function == "g" else "m²", "isotropic",
+        found.bandwidth if contrast.function == "g" else None,
+    )  # fmt: skip
+    return ClusterFit(
+        model=found.fit.model,
+        intervals=intervals,
+        status=status,
+        reason=reason,
+        method="minimum-contrast",
+        choices={
+            "function": contrast.function,
+            "exponent": contrast.exponent,
+            "r_min_m": float(contrast.radii[0]),
+            "r_max_m": float(contrast.radii[-1]),
+            "range_chosen_by": "user" if choices.r_max is not None else "first fit",
+            "bandwidth_m": found.bandwidth,
+            "bounds": {k: list(v) for k, v in found.fit.bounds.items()},
+            "contrast": found.fit.value,
+            "bootstrap": bootstrap,
+            "clustering_p_value": p_value,
+        },
+        curve=curve,
+        fitted=contrast.curve_of(found.fit.model),
+        surface=found.fit.surface,
+        draws=draws,
+    )
+
+
+class CannotFit(GeoclustError):
+    """The survey is too poor for any fit; carries the status of the answer."""
+
+    exit_status = 3
+
+    def __init__(self, status: str, reason: str) -> None:
+        super().__init__(reason)
+        self.status = status
+
+
+def _clustering_p_value(
+    survey: Survey, r_max: float, rng: np.random.Generator, workers: int | None, progress: Progress | None
+) -> float:
+    """One-sided test for clustering: extreme rank length of L over the fitted range, 199 simulations."""
+    count = 199
+    radii = np.linspace(0.0, r_max, 51)[1:]
+    observed = SecondOrder.measure(survey, radii, None, "isotropic", workers).l()
+
+    def one(seed: np.random.Generator) -> Floats:
+        points = survey.area.local_uniform_points(survey.n, seed)
+        return SecondOrder.of_points(points, survey.area, radii, None, workers=1).l().values
+
+    curves = np.empty((count, len(radii)))
+    for k, values in enumerate(in_order(one, rng.spawn(count), workers)):
+        curves[k] = values
+        if progress is not None:
+            progress("test for clustering", k + 1, count)
+    return global_envelope(observed, curves, alternative="clustered").p_value
+
+
+def _bootstrap(
+    kind: type[ClusterModel],
+    model: ClusterModel,
+    area: StudyArea,
+    choices: ContrastChoices,
+    count: int,
+    rng: np.random.Generator,
+    workers: int | None,
+    progress: Progress | None,
+) -> dict[str, Floats]:
+    def one(seed: np.random.Generator) -> dict[str, float] | None:
+        points = draw_pattern(model, area, seed).points
+        if len(points) < 2:
+            return None
+        return fit_points(kind, points, area, choices).fit.model.parameters
+
+    kept: list[dict[str, float]] = []
+    for k, parameters in enumerate(in_order(one, rng.spawn(count), workers)):
+        if parameters is not None:
+            kept.append(parameters)
+        if progress is not None:
+            progress("bootstrap", k + 1, count)
+    return {p.name: np.array([v[p.name] for v in kept]) for p in kind.described} if kept else {}
+
+
+def _verdict(
+    survey: Survey, found: MomentFit, p_value: float, intervals: dict[str, tuple[float, float]]
+) -> tuple[str, str]:
+    """Status and sentence, the gravest reason first."""
+    model = found.fit.model
+    if p_value > verdicts.TEST_LEVEL:
+        return _named("no-clustering", p_value=p_value, r_max=found.r_max)
+    scale_name, scale = _scales(model)[-1]
+    if scale > 0.5 * found.r_max:
+        return _named("sigma-beyond-range", scale=scale, r_max=found.r_max)
+    if found.fit.on_bound:
+        name = found.fit.on_bound[0]
+        described = next(p for p in model.described if p.name == name)
+        factor, unit = (1e4, "ha⁻¹") if described.per_area else (1.0, described.unit)
+        low, high = found.fit.bounds[name]
+        return _named("on-bound", names=name.replace("_", " "),
+                      bounds=f"{low * factor:.3g} to {high * factor:.3g} {unit}")  # fmt: skip
+    clusters = model.parent_intensity * survey.area.area
+    if clusters < verdicts.FEWEST_CLUSTERS:
+        return _named("few-clusters", clusters=clusters, fewest=verdicts.FEWEST_CLUSTERS)
+    for p in model.described:
+        low, high = intervals.get(p.name, (1.0, 1.0))
+        if high > verdicts.WIDEST_INTERVAL * low:
+            factor, unit = (1e4, "ha⁻¹") if p.per_area else (1.0, p.unit)
+            return _named("flat-valley", names=p.meaning, low=low * factor, high=high * factor, unit=unit)
+    return "ok", ""
+
+
+def _named(status: str, **figures: object) -> tuple[str, str]:
+    return status, verdicts.sentence(status, **figures)

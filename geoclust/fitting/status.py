@@ -1,0 +1,42 @@
+"""When the data cannot tell: the reasons, one sentence each."""
+
+from __future__ import annotations
+
+# fewer points than this carry no answer about clusters (common practice)
+FEWEST_POINTS = 20
+# fewer clusters than about ten in the study area give no usable spread of sizes and distances
+FEWEST_CLUSTERS = 10.0
+# an interval whose ends differ by more than this factor is no answer
+WIDEST_INTERVAL = 20.0
+# chance of a false alarm of the test for clustering
+TEST_LEVEL = 0.05
+
+REASONS: dict[str, str] = {
+    "too-few-points": (
+        "The survey holds {n} points; at least {fewest} are needed before anything can be said about clusters."
+    ),
+    "no-clustering": (
+        "The points are not more clustered than chance alone would make them (p = {p_value:.2g} over "
+        "distances up to {r_max:.4g} m), so there are no clusters to measure."
+    ),
+    "on-bound": (
+        "The best value of {names} lies at the limit of the search ({bounds}), so the data do not fix it."
+    ),
+    "sigma-beyond-range": (
+        "The fitted spread of a cluster ({scale:.4g} m) is more than half of the largest distance studied "
+        "({r_max:.4g} m); the study area is too small to see whole clusters, or the density drifts across it."
+    ),
+    "few-clusters": (
+        "Only about {clusters:.1f} clusters fall into the study area; fewer than {fewest:.0f} cannot tell how "
+        "clusters differ from each other."
+    ),
+    "flat-valley": (
+        "Very different values of {names} fit almost equally well: the 95 % interval reaches from {low:.3g} to "
+        "{high:.3g} {unit}."
+    ),
+}
+
+
+def sentence(status: str, **figures: object) -> str:
+    """The sentence of a status with its figures filled in; empty for ``ok``."""
+    return "" if status == "ok" else REASONS[status].format(**figures)
