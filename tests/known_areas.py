@@ -80,8 +80,8 @@ NAMED = {
 def share_by_arcs(polygon: shapely.Geometry, centre: np.ndarray, radius: float) -> float:
     """Share of a circle inside a polygon: cut at every edge, shapely says which arcs are inside."""
     x, y = centre
-    box = (x - radius, y - radius, x + radius, y + radius)
-    near = shapely.clip_by_rect(polygon.boundary, *(np.array(box) + [-1, -1, 1, 1]))
+    reach = radius + 1
+    near = shapely.clip_by_rect(polygon.boundary, x - reach, y - reach, x + reach, y + reach)
     angles = []
     for line in shapely.get_parts(near):
         at = shapely.get_coordinates(line).astype(np.longdouble) - np.asarray(centre, np.longdouble)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from functools import cached_property
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -11,7 +12,8 @@ from affine import Affine
 from pyproj import CRS
 from shapely.geometry.polygon import orient
 
-from geoclust.area import _cells, _circles, _edges, _gaussian
+from geoclust.area import _cells, _circles, _covariance, _edges, _gaussian
+from geoclust.area.covariance import edge_tree, set_covariance
 from geoclust.errors import InputError, UsageError, not_allowed
 from geoclust.workers import in_order
 
@@ -206,6 +208,36 @@ class StudyArea:
             pass
         return out
 
+    @cached_property
+    def tree(self) -> _covariance.EdgeTree:
+        """The hierarchy of boxes over the edges, for pairs of edges (local coordinates)."""
+        return edge_tree(self._starts, self._ends, self._ring_sizes)
+
+    def set_covariance(self, shifts: npt.ArrayLike, *, workers: int | None = None) -> Floats:
+        """Area that the study area and a shifted copy of it have in common.
+
+        The translation edge weight is its inverse (Ohser & Stoyan 1981, Biometrical
+        Journal 23: 523-533).
+
+        Parameters
+        ----------
+        shifts
+            (k, 2) metres east and north.
+        workers
+            Threads; one a core if not given.
+
+        Returns
+        -------
+        ndarray, (k,)
+            Square metres; the same for a shift and its opposite, the whole area for none.
+
+        Raises
+        ------
+        UsageError
+            If the shape does not fit or a shift is not finite.
+        """
+        return set_covariance(self, np.ascontiguousarray(checked_points(shifts, "shifts")), workers)
+
     def gaussian_shares(
         self, centres: npt.ArrayLike, sigma: npt.ArrayLike, *, workers: int | None = None
     ) -> Floats:
@@ -327,7 +359,8 @@ class StudyArea:
         vertex of its part; and the radius below which nothing can be missed.
         """
         small = [
-            p for p in self.polygon.geoms if 0.5 * np.hypot(*np.subtract(p.bounds[2:], p.bounds[:2])) < largest
+            p for p in self.polygon.geoms
+            if 0.5 * np.hypot(*np.subtract(p.bounds[2:], p.bounds[:2])) < largest
             and shapely.minimum_bounding_radius(p) < largest
         ]  # fmt: skip
         total = sum(p.area for p in small)
@@ -369,7 +402,7 @@ def checked_points(xy: npt.ArrayLike, name: str = "xy") -> Floats:
     return at
 
 
-def _checked_polygon(polygon: object) -> shapely.MultiPolygon:
+def _checked_polygon(polygon: Any) -> shapely.MultiPolygon:
     if isinstance(polygon, shapely.Polygon):
         polygon = shapely.MultiPolygon([polygon]) if not polygon.is_empty else shapely.MultiPolygon()
     if not isinstance(polygon, shapely.MultiPolygon):

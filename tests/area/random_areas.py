@@ -70,6 +70,7 @@ def circles(
     polygon: shapely.Geometry, unit: float, seed: int, count: int = 40
 ) -> tuple[np.ndarray, np.ndarray]:
     """Circles about a polygon: some round its vertices, some with round radii."""
+    count = 40
     rng = np.random.default_rng(seed)
     minx, miny, maxx, maxy = polygon.bounds
     centres = rng.uniform((minx - unit, miny - unit), (maxx + unit, maxy + unit), (count, 2))
