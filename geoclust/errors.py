@@ -30,6 +30,16 @@ class UsageError(GeoclustError, ValueError):
     exit_status = 2
 
 
+class CannotTell(GeoclustError):
+    """The data cannot carry the answer; `status` names the reason, the message explains it."""
+
+    exit_status = 3
+
+    def __init__(self, status: str, reason: str) -> None:
+        super().__init__(reason)
+        self.status = status
+
+
 def not_allowed(parameter: str, allowed: str | Iterable[str], got: object) -> UsageError:
     """Build the one form of message for a value that is not allowed.
 

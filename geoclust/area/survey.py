@@ -58,8 +58,8 @@ class Survey:
         object.__setattr__(self, "xy", at)
         outside = ~self.area.contains(at)
         if outside.any():
-            # on the boundary, to rounding, counts as inside
-            outside[outside] = self.area.distance_to_boundary(at[outside], 1.0) > 1e-6
+            # on the boundary, to the millimetre, counts as inside
+            outside[outside] = self.area.distance_to_boundary(at[outside], 1.0) > 1e-3
         if outside.any():
             raise InputError(
                 f"{int(outside.sum())} of {len(at)} points lie outside the study area; "

@@ -13,7 +13,7 @@ from geoclust.area.survey import Survey
 from geoclust.curves.curve import Curve
 from geoclust.curves.envelopes import global_envelope
 from geoclust.curves.second_order import SecondOrder, default_bandwidth
-from geoclust.errors import GeoclustError, not_allowed
+from geoclust.errors import CannotTell, not_allowed
 from geoclust.fitting import status as verdicts
 from geoclust.fitting.contrast import EXPONENTS, Contrast, ContrastFit, checked_function, fit_contrast
 from geoclust.fitting.result import ClusterFit
@@ -138,7 +138,7 @@ def fit_by_contrast(
     test_seed, boot_seed = rng.spawn(2)
     if survey.n < verdicts.FEWEST_POINTS:
         reason = verdicts.sentence("too-few-points", n=survey.n, fewest=verdicts.FEWEST_POINTS)
-        raise CannotFit("too-few-points", reason)
+        raise CannotTell("too-few-points", reason)
     found = fit_points(kind, survey.local_xy, survey.area, choices, workers)
     p_value = _clustering_p_value(survey, found.r_max, test_seed, workers, progress)
     draws = _bootstrap(kind, found.fit.model, survey.area, choices, bootstrap, boot_seed, workers, progress)
@@ -178,16 +178,6 @@ def fit_by_contrast(
         surface=found.fit.surface,
         draws=draws,
     )
-
-
-class CannotFit(GeoclustError):
-    """The survey is too poor for any fit; carries the status of the answer."""
-
-    exit_status = 3
-
-    def __init__(self, status: str, reason: str) -> None:
-        super().__init__(reason)
-        self.status = status
 
 
 def _clustering_p_value(
