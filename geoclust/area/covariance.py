@@ -10,7 +10,7 @@ import numpy.typing as npt
 import shapely
 from shapely.affinity import translate
 
-from geoclust.area import _covariance
+from geoclust.area import _covariance, _isotropised
 from geoclust.workers import in_order
 
 if TYPE_CHECKING:
@@ -99,3 +99,25 @@ def set_covariance(area: StudyArea, shifts: Floats, workers: int | None = None) 
         # crossings that rounding left undecided: the general overlay decides them
         out[k] = shapely.intersection(area.polygon, translate(area.polygon, *shifts[k])).area
     return out
+
+
+def isotropised(area: StudyArea, radii: Floats, workers: int | None = None) -> Floats:
+    """Mean of the set covariance over directions, for increasing positive radii."""
+    tree = area.tree
+    leaves = np.flatnonzero(tree.high >= 0)
+    # in the order of their edges, so that the later one of a pair is found by its number
+    leaves = leaves[np.argsort(tree.low[leaves])]
+
+    def work(part: slice) -> Floats:
+        out = np.zeros((3, len(radii)))
+        _isotropised.add_run_pairs(tree, leaves, part.start, part.stop, radii, out)
+        return out
+
+    total = np.zeros((3, len(radii)))
+    parts = [slice(a, min(a + 16, len(leaves))) for a in range(0, len(leaves), 16)]
+    for more in in_order(work, parts, workers):
+        total += more
+    exact, flat, logs = total
+    integral = exact + np.log(radii) * np.cumsum(flat) - np.cumsum(logs)
+    found = area.area - integral / (2 * np.pi)
+    return np.where(radii < area.diameter, np.clip(found, 0.0, area.area), 0.0)

@@ -13,7 +13,7 @@ from pyproj import CRS
 from shapely.geometry.polygon import orient
 
 from geoclust.area import _cells, _circles, _covariance, _edges, _gaussian
-from geoclust.area.covariance import edge_tree, set_covariance
+from geoclust.area.covariance import edge_tree, isotropised, set_covariance
 from geoclust.errors import InputError, UsageError, not_allowed
 from geoclust.workers import in_order
 
@@ -237,6 +237,46 @@ class StudyArea:
             If the shape does not fit or a shift is not finite.
         """
         return set_covariance(self, np.ascontiguousarray(checked_points(shifts, "shifts")), workers)
+
+    def isotropic_set_covariance(self, radii: npt.ArrayLike, *, workers: int | None = None) -> Floats:
+        """Mean over all directions of the set covariance at each distance.
+
+        The rigid-motion edge weight is its inverse (Ohser 1983, Mathematische
+        Operationsforschung und Statistik, Series Statistics 14: 63-71). Exact:
+        a double integral over the boundary in closed form for every pair of edges.
+
+        Parameters
+        ----------
+        radii
+            (k,) distances in metres, not negative, in any order.
+        workers
+            Threads; one a core if not given.
+
+        Returns
+        -------
+        ndarray, (k,)
+            Square metres.
+
+        Raises
+        ------
+        UsageError
+            If a radius is negative or not finite.
+        """
+        at = np.atleast_1d(np.asarray(radii, dtype=np.float64))
+        if at.ndim != 1 or not np.all(np.isfinite(at)) or np.any(at < 0):
+            raise not_allowed("radii", "finite distances in metres, not negative", radii)
+        known, where = np.unique(at, return_inverse=True)
+        out = np.full(len(known), self.area)
+        positive = known > 0
+        if positive.any():
+            out[positive] = isotropised(self, known[positive], workers)
+        return out[where]
+
+    @cached_property
+    def diameter(self) -> float:
+        """Largest distance between two points of the study area, metres."""
+        at = shapely.get_coordinates(self.polygon.convex_hull) - self.origin
+        return float(max(np.hypot(*(at - c).T).max() for c in at))
 
     def gaussian_shares(
         self, centres: npt.ArrayLike, sigma: npt.ArrayLike, *, workers: int | None = None
