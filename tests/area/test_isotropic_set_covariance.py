@@ -147,8 +147,8 @@ def test_new_vertices_on_edges_change_nothing(drawn):
     area = StudyArea(polygon)
     found = area.isotropic_set_covariance(r)
     assert np.all((found >= 0) & (found <= area.area))
-    # slivers: the integral is a small difference of parts of the size of the perimeter squared
-    tolerance = 1e-9 * area.area + 1e-13 * area.perimeter**2
+    # far pairs of edges are integrated by nodes; slivers: a small difference of large parts
+    tolerance = 1e-8 * area.area + 1e-13 * area.perimeter**2
     assert np.abs(StudyArea(noded).isotropic_set_covariance(r) - found).max() < tolerance
 
 
