@@ -1,3 +1,47 @@
-"""geoclust: clusters in mapped field surveys, and where on the map they are."""
+"""geoclust: clusters in mapped field surveys, and where on the map they are.
 
-__version__ = "0.1.0"
+Coordinates are (n, 2) arrays, easting then northing, in metres; intensities are
+per square metre; every random function takes `rng`, a generator or a seed.
+"""
+
+from geoclust.area.study_area import StudyArea
+from geoclust.area.survey import Survey
+from geoclust.centres.locate import locate_centres
+from geoclust.centres.result import CentreMap
+from geoclust.curves.curve import Curve
+from geoclust.curves.envelopes import global_envelope, randomness_envelopes
+from geoclust.curves.second_order import k_function, l_function, pair_correlation
+from geoclust.errors import CannotTell, GeoclustError, InputError, OutputError, UsageError
+from geoclust.fitting.fit import fit_clusters
+from geoclust.fitting.result import ClusterFit
+from geoclust.layers.survey_layers import audit_survey
+from geoclust.models.thomas import Thomas
+from geoclust.simulation.patterns import simulate_patterns
+from geoclust.version import __version__
+from geoclust.workflow import analyse, read_survey
+
+__all__ = [
+    "CannotTell",
+    "CentreMap",
+    "ClusterFit",
+    "Curve",
+    "GeoclustError",
+    "InputError",
+    "OutputError",
+    "StudyArea",
+    "Survey",
+    "Thomas",
+    "UsageError",
+    "__version__",
+    "analyse",
+    "audit_survey",
+    "fit_clusters",
+    "global_envelope",
+    "k_function",
+    "l_function",
+    "locate_centres",
+    "pair_correlation",
+    "randomness_envelopes",
+    "read_survey",
+    "simulate_patterns",
+]

@@ -22,9 +22,7 @@ SWEEPS = 50
 OUTLINE = 0.5
 
 
-def delineate(
-    draws: Draws, local_xy: Floats, area: StudyArea
-) -> tuple[pd.DataFrame, gpd.GeoDataFrame]:
+def delineate(draws: Draws, local_xy: Floats, area: StudyArea) -> tuple[pd.DataFrame, gpd.GeoDataFrame]:
     """Delineate clusters by the partition that minimises the expected Binder loss.
 
     Every sampled partition is scored by the sum over pairs of points of the
@@ -103,9 +101,7 @@ def _together(owner: npt.NDArray[np.int32]) -> sparse.csr_array:
     return out
 
 
-def _best_partition(
-    owner: npt.NDArray[np.int32], together: sparse.csr_array
-) -> npt.NDArray[np.int64]:
+def _best_partition(owner: npt.NDArray[np.int32], together: sparse.csr_array) -> npt.NDArray[np.int64]:
     best, least = owner[0], np.inf
     for o in owner:
         z = _indicators(o)
@@ -119,9 +115,7 @@ def _best_partition(
     return np.asarray(np.unique(labels, return_inverse=True)[1], dtype=np.int64)
 
 
-def _relabelled(
-    labels: npt.NDArray[np.int64], none: npt.NDArray[np.bool_]
-) -> npt.NDArray[np.int64]:
+def _relabelled(labels: npt.NDArray[np.int64], none: npt.NDArray[np.bool_]) -> npt.NDArray[np.int64]:
     """Number clusters from 1, the largest first; 0 where there is none."""
     out = np.zeros(len(labels), np.int64)
     kept, index, counts = np.unique(labels[~none], return_inverse=True, return_counts=True)

@@ -76,9 +76,7 @@ def try_background(data, target, state, step, rng):
             ratio = 1.0
     log_a += np.log(ratio)
     rest = state.scalars[EXPOSURE] + target.mu_rate
-    log_a -= (data.x.size + target.mu_shape) * np.log(
-        (rest + new * data.area) / (rest + old * data.area)
-    )
+    log_a -= (data.x.size + target.mu_shape) * np.log((rest + new * data.area) / (rest + old * data.area))
     if np.log(rng.random()) < log_a:
         for k in range(data.x.size):
             state.density[k] += new - old

@@ -129,14 +129,14 @@ def fit_contrast(
     area
         Area of the study area, m², which bounds the parent intensity.
     """
-    scale_name = next(p.name for p in kind.described if p.unit == "m")
+    scale_name = kind.scale_name
     # from a tenth of a centre in the study area to ten centres a point
     low = np.log([0.1 / area, max(contrast.radii[0], contrast.radii[-1] / 200.0)])
     high = np.log([10.0 * intensity, 2.0 * contrast.radii[-1]])
 
     def model_at(theta: Floats) -> ClusterModel:
         rho, scale = np.exp(theta)
-        return kind(parent_intensity=rho, mean_offspring=intensity / rho, **{scale_name: scale})
+        return kind.of(rho, scale, intensity / rho)
 
     def residuals(theta: Floats) -> Floats:
         return contrast.residuals(contrast.curve_of(model_at(theta)))

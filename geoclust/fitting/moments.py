@@ -85,16 +85,11 @@ def fit_points(
     r_max = choices.r_max if choices.r_max is not None else widest
     found = _fit_range(kind, local_xy, area, choices, r_max, workers)
     if choices.r_max is None:
-        scale = next(v for p, v in _scales(found.fit.model))
-        shorter = RANGE_IN_SCALES[choices.function] * scale
+        shorter = RANGE_IN_SCALES[choices.function] * found.fit.model.scale
         if shorter < 0.8 * widest:
             r_max = max(shorter, 4.0 * found.bandwidth)
             found = _fit_range(kind, local_xy, area, choices, r_max, workers)
     return found
-
-
-def _scales(model: ClusterModel) -> list[tuple[str, float]]:
-    return [(p.name, model.parameters[p.name]) for p in model.described if p.unit == "m"]
 
 
 def _fit_range(
@@ -232,7 +227,7 @@ def _verdict(
     model = found.fit.model
     if p_value > verdicts.TEST_LEVEL:
         return _named("no-clustering", p_value=p_value, r_max=found.r_max)
-    scale_name, scale = _scales(model)[-1]
+    scale = model.scale
     if scale > 0.5 * found.r_max:
         return _named("sigma-beyond-range", scale=scale, r_max=found.r_max)
     if found.fit.on_bound:

@@ -113,7 +113,7 @@ class ChainSetup:
         self.area = area
         self.start = start
         self.priors = priors
-        scale = start.parameters[kind.scale_name]
+        scale = start.scale
         self.margin = kind.margin_in_scales * scale if margin is None else margin
         self.wide = area.dilated(self.margin)
         largest = priors.scale_bounds if priors is not None else (scale, scale)
@@ -135,8 +135,7 @@ class Chain:
         self.setup = setup
         self.rng = rng
         n = setup.n
-        kind = type(setup.start)
-        scale = setup.start.parameters[kind.scale_name]
+        scale = setup.start.scale
         expected = setup.start.parent_intensity * setup.wide.area
         eta = 0.0
         if setup.target.with_background:
@@ -224,9 +223,7 @@ class Chain:
         """Keep the present state, with memberships drawn."""
         s = self.state
         owner = np.empty(self.setup.n, np.int32)
-        _chain.draw_members(
-            self.setup.data, self.setup.target, s, owner, self.spare_density, self.rng
-        )
+        _chain.draw_members(self.setup.data, self.setup.target, s, owner, self.spare_density, self.rng)
         back = np.empty_like(owner)
         back[self.setup.order] = owner
         number = int(s.number[0])
@@ -314,11 +311,9 @@ def collect(setup: ChainSetup, chains: list[Chain], rng: np.random.Generator) ->
         )
         # the background was in units of the mean offspring; from here on it is points per m²
         draws.background = draws.background * draws.mean_offspring
-    tried = sum(c.state.tried for c in chains)
-    taken = sum(c.state.taken for c in chains)
-    draws.acceptance = {
-        name: float(taken[k] / tried[k]) for k, name in enumerate(MOVES) if tried[k] > 0
-    }
+    tried = np.sum([c.state.tried for c in chains], axis=0)
+    taken = np.sum([c.state.taken for c in chains], axis=0)
+    draws.acceptance = {name: float(taken[k] / tried[k]) for k, name in enumerate(MOVES) if tried[k] > 0}
     return draws
 
 
@@ -350,7 +345,9 @@ def run_chains(
     for _ in range(rounds):
         for _ in in_order(warm, running, workers):
             pass
-    extend(running, draws=draws, moves_per_draw=moves_per_draw, every=every, workers=workers, progress=progress)
+    extend(
+        running, draws=draws, moves_per_draw=moves_per_draw, every=every, workers=workers, progress=progress
+    )
     return running
 
 

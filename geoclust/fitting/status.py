@@ -13,7 +13,8 @@ TEST_LEVEL = 0.05
 
 REASONS: dict[str, str] = {
     "too-few-points": (
-        "The survey holds {n} points; at least {fewest} are needed before anything can be said about clusters."
+        "The survey holds {n} points; at least {fewest} are needed before anything can be said "
+        "about clusters."
     ),
     "no-clustering": (
         "The points are not more clustered than chance alone would make them (p = {p_value:.2g} over "
@@ -27,12 +28,12 @@ REASONS: dict[str, str] = {
         "({r_max:.4g} m); the study area is too small to see whole clusters, or the density drifts across it."
     ),
     "few-clusters": (
-        "Only about {clusters:.1f} clusters fall into the study area; fewer than {fewest:.0f} cannot tell how "
-        "clusters differ from each other."
+        "Only about {clusters:.1f} clusters fall into the study area; fewer than {fewest:.0f} cannot tell "
+        "how clusters differ from each other."
     ),
     "flat-valley": (
-        "Very different values of {names} fit almost equally well: the 95 % interval reaches from {low:.3g} to "
-        "{high:.3g} {unit}."
+        "Very different values of the {names} fit almost equally well: the 95 % interval reaches from "
+        "{low:.3g} to {high:.3g} {unit}."
     ),
 }
 

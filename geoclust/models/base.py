@@ -10,7 +10,7 @@ from __future__ import annotations
 
 from abc import ABC, abstractmethod
 from dataclasses import dataclass, fields
-from typing import ClassVar
+from typing import ClassVar, Self
 
 import numpy as np
 import numpy.typing as npt
@@ -66,6 +66,21 @@ class ClusterModel(ABC):
     def intensity(self) -> float:
         """Points per square metre."""
         return self.parent_intensity * self.mean_offspring
+
+    @classmethod
+    def of(cls, parent_intensity: float, scale: float, mean_offspring: float) -> Self:
+        """The model with these parameters, whatever its scale is called."""
+        named = {
+            "parent_intensity": parent_intensity,
+            "mean_offspring": mean_offspring,
+            cls.scale_name: scale,
+        }
+        return cls(**named)
+
+    @property
+    def scale(self) -> float:
+        """The scale parameter, metres."""
+        return self.parameters[self.scale_name]
 
     @abstractmethod
     def offspring_density(self, r: npt.ArrayLike) -> Floats:

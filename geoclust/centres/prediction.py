@@ -1,0 +1,115 @@
+"""Numbers per zone, and what polygons that were not walked probably hold."""
+
+from __future__ import annotations
+
+import geopandas as gpd
+import numpy as np
+import numpy.typing as npt
+import shapely
+
+from geoclust.area.study_area import StudyArea
+from geoclust.fitting.sampling import ChainSetup, Draws
+
+Floats = npt.NDArray[np.float64]
+
+
+def _polygon_part(geometry: shapely.Geometry) -> shapely.MultiPolygon:
+    """The polygons of whatever an overlay returned."""
+    parts = [
+        g for g in shapely.get_parts(shapely.make_valid(geometry))
+        if isinstance(g, shapely.Polygon | shapely.MultiPolygon) and g.area > 0
+    ]  # fmt: skip
+    return shapely.multipolygons([p for g in parts for p in shapely.get_parts(g)])
+
+
+def _areas(geometries: gpd.GeoSeries, area: StudyArea) -> list[StudyArea | None]:
+    out: list[StudyArea | None] = []
+    for g in geometries:
+        part = _polygon_part(g)
+        out.append(None if part.is_empty else StudyArea(part, area.crs))
+    return out
+
+
+def _with_numbers(
+    given: gpd.GeoDataFrame, areas: list[StudyArea | None], numbers: dict[str, npt.NDArray[np.generic]]
+) -> gpd.GeoDataFrame:
+    out = given.copy()
+    out["area_ha"] = [0.0 if a is None else a.area / 1e4 for a in areas]
+    for name, values in numbers.items():
+        out[name] = values
+    return out
+
+
+def _summary(counts: Floats, name: str) -> dict[str, Floats]:
+    """Mean and 95 % interval over draws; counts is (polygons, draws)."""
+    low, high = np.quantile(counts, [0.025, 0.975], axis=1) if counts.size else np.zeros((2, len(counts)))
+    return {
+        f"{name}_mean": counts.mean(axis=1) if counts.size else np.zeros(len(counts)),
+        f"{name}_low": low,
+        f"{name}_high": high,
+    }
+
+
+def zone_numbers(
+    zones: gpd.GeoDataFrame, draws: Draws, local_xy: Floats, area: StudyArea
+) -> gpd.GeoDataFrame:
+    """Points and centres in the part of each zone that was surveyed.
+
+    Adds `area_ha` (of that part), `points`, `centres_mean`, `centres_low`,
+    `centres_high` (95 %).
+    """
+    parts = _areas(zones.geometry.intersection(area.polygon), area)
+    flat = [c for chain in draws.centres for c in chain]
+    counts = np.zeros((len(parts), len(flat)))
+    points = np.zeros(len(parts), np.int64)
+    stacked = np.concatenate(flat) if flat else np.empty((0, 2))
+    which = np.repeat(np.arange(len(flat)), [len(c) for c in flat])
+    for k, part in enumerate(parts):
+        if part is None:
+            continue
+        inside = part.contains(stacked + area.origin) & area.local_contains(stacked)
+        counts[k] = np.bincount(which[inside], minlength=len(flat))
+        points[k] = int(part.contains(local_xy + area.origin).sum())
+    return _with_numbers(zones, parts, {"points": points, **_summary(counts, "centres")})
+
+
+def predict_unsurveyed(
+    unsurveyed: gpd.GeoDataFrame, setup: ChainSetup, draws: Draws, rng: np.random.Generator
+) -> gpd.GeoDataFrame:
+    """What polygons outside the study area probably hold, individuals and centres.
+
+    For every posterior draw, the sampled centres near the study area send
+    offspring there (independent of those seen, as numbers in disjoint regions
+    are), new centres are drawn where none were sampled, and background points
+    are added. Parts inside the study area are cut off first: they were walked.
+
+    Adds `area_ha` (of the part not walked), `points_mean`, `points_low`,
+    `points_high` and the same for centres (95 % prediction intervals).
+    """
+    area, kind = setup.area, type(setup.start)
+    parts = _areas(unsurveyed.geometry.difference(area.polygon), area)
+    flat = [
+        (draws.centres[a][b], draws.scale[a, b], draws.parent_intensity[a, b],
+         draws.mean_offspring[a, b], draws.background[a, b])
+        for a in range(draws.scale.shape[0]) for b in range(draws.scale.shape[1])
+    ]  # fmt: skip
+    points = np.zeros((len(parts), len(flat)))
+    centres = np.zeros_like(points)
+    for k, part in enumerate(parts):
+        if part is None:
+            continue
+        wide = part.dilated(setup.margin)
+        beyond = _polygon_part(wide.polygon.difference(setup.wide.polygon))
+        outer = None if beyond.is_empty else StudyArea(beyond, area.crs)
+        for m, (known, scale, rho, mu, epsilon) in enumerate(flat):
+            where = known + area.origin
+            where = where[wide.contains(where)]
+            if outer is not None:
+                fresh = outer.uniform_points(int(rng.poisson(rho * outer.area)), rng)
+                where = np.concatenate([where, fresh])
+            centres[k, m] = part.contains(where).sum()
+            model = kind.of(rho, scale, mu)
+            source = np.repeat(where, rng.poisson(mu, len(where)), axis=0)
+            offspring = source + model.draw_offsets(len(source), rng)
+            points[k, m] = part.contains(offspring).sum() + rng.poisson(epsilon * part.area)
+    return _with_numbers(unsurveyed, parts, {**_summary(points, "points"), **_summary(centres, "centres")})

@@ -1,0 +1,453 @@
+"""The whole job from layers to a folder of results: each step calls its room and no more."""
+
+from __future__ import annotations
+
+import secrets
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import Any
+
+import geopandas as gpd
+import numpy as np
+import pandas as pd
+
+from geoclust.area.study_area import StudyArea
+from geoclust.area.survey import Survey
+from geoclust.centres.locate import locate_centres
+from geoclust.centres.result import CentreMap
+from geoclust.curves.curve import Curve
+from geoclust.curves.envelopes import EnvelopeTest, randomness_envelopes
+from geoclust.curves.second_order import default_radii, k_function
+from geoclust.errors import CannotTell, OutputError, UsageError, not_allowed
+from geoclust.fitting.fit import fit_clusters
+from geoclust.fitting.result import ClusterFit
+from geoclust.layers import styles
+from geoclust.layers.columns import with_our_columns
+from geoclust.layers.package import PatternWriter, write_package
+from geoclust.layers.raster import Grid, grid_like
+from geoclust.layers.results_folder import results_folder
+from geoclust.layers.survey_layers import PathLike, read_polygons, read_survey_layers
+from geoclust.models.catalogue import model_by_name
+from geoclust.report.page import write_page
+from geoclust.report.record import fit_record, library_versions, write_record
+from geoclust.simulation.patterns import simulate_patterns
+
+Progress = Callable[[str, int, int], None]
+
+# patterns in the layer simulated_points: enough to judge by eye, small enough to open
+PATTERNS = 39
+
+FILES = (
+    ("report.html", "this page"),
+    ("results.gpkg", "points with their cluster, study area, clusters, zones, simulated points; for a GIS"),
+    ("centre_intensity.tif", "raster of expected centres per hectare, its standard deviation, and the "
+                             "probability of at least one centre in the cell"),
+    ("curves.csv", "the curves L and g with their envelopes, and the curve that the model was fitted on"),
+    ("fit.json", "parameters, intervals, status, choices and data audit for other programs"),
+    ("*.sld", "styles for raster and layers (OGC Styled Layer Descriptor)"),
+)  # fmt: skip
+
+
+def read_survey(
+    points: PathLike,
+    area: PathLike,
+    *,
+    points_layer: str | None = None,
+    area_layer: str | None = None,
+    crs: object | None = None,
+    x_column: str | None = None,
+    y_column: str | None = None,
+    metric_crs: object | None = None,
+    repair: bool = False,
+) -> Survey:
+    """Read a survey from two layers, in a metric coordinate reference system.
+
+    Parameters
+    ----------
+    points, area
+        Files that GDAL opens as vector layers (or CSV with columns named): the mapped
+        individuals, and the polygons inside which every one was looked for.
+    points_layer, area_layer
+        Names of the layers in them.
+    crs
+        System of the coordinates where a layer does not say; ``local`` for a plane in metres
+        with no place on Earth.
+    x_column, y_column
+        Coordinate columns of a CSV file.
+    metric_crs
+        Metric system to use; the best one for the study area is chosen if not given.
+    repair
+        Repair invalid polygons even if that moves more than 0.1 % of the area.
+
+    Returns
+    -------
+    Survey
+        Its `audit` tells what was found and done.
+
+    Raises
+    ------
+    InputError, UsageError
+        One sentence on what was given, what is wrong and what to do.
+    """
+    found = read_survey_layers(
+        points, area, points_layer=points_layer, area_layer=area_layer, crs=crs, x_column=x_column,
+        y_column=y_column, metric_crs=metric_crs, repair=repair,
+    )  # fmt: skip
+    return Survey(
+        found.xy, StudyArea(found.polygon, found.crs), attributes=found.attributes, audit=found.audit
+    )
+
+
+@dataclass(frozen=True, eq=False)
+class Analysis:
+    """What an analysis found.
+
+    Attributes
+    ----------
+    status, reason
+        ``ok``, or why the data cannot tell, and the sentence.
+    survey, envelopes, fit, centres
+        Results of the steps; None where a step had nothing to say.
+    choices, seed
+        What was chosen on the way.
+    out
+        Folder that holds the results.
+    """
+
+    status: str
+    reason: str
+    survey: Survey
+    envelopes: dict[str, EnvelopeTest]
+    fit: ClusterFit | None
+    centres: CentreMap | None
+    choices: dict[str, object]
+    seed: int
+    out: Path
+    notes: list[str] = field(default_factory=list)
+
+    def lines(self) -> list[str]:
+        """The answer in a few lines of text."""
+        survey = self.survey
+        out = [
+            f"{survey.n:,} points in {survey.area.area / 1e4:,.2f} ha ({survey.intensity * 1e4:.3g} per ha)"
+        ]
+        if "L" in self.envelopes:
+            test = self.envelopes["L"]
+            out.append(f"complete randomness: p = {test.p_value:.3g} ({test.simulations} simulations, L)")
+        if self.fit is not None and self.status == "ok":
+            for p in self.fit.model.described:
+                factor, unit = (1e4, "ha⁻¹") if p.per_area else (1.0, "" if p.unit == "1" else p.unit)
+                text = (
+                    f"{p.name.replace('_', ' ')}: {self.fit.parameters[p.name] * factor:.4g} {unit}".rstrip()
+                )
+                if p.name in self.fit.intervals:
+                    low, high = self.fit.intervals[p.name]
+                    text += f" (95 %: {low * factor:.4g} to {high * factor:.4g})"
+                out.append(text)
+        if self.centres is not None:
+            mean, low, high = self.centres.interval_inside()
+            out.append(f"cluster centres in the study area: {mean:.1f} (95 %: {low:.0f} to {high:.0f})")
+            if not self.centres.converged:
+                out.append(
+                    f"the chains do not agree yet (R-hat {self.centres.r_hat:.3f}, effective sample size "
+                    f"{self.centres.effective_sample_size:.0f}): take the map with caution"
+                )
+        if self.status != "ok":
+            out.append(f"cannot tell ({self.status}): {self.reason}")
+        return [*out, *self.notes, f"results in {self.out}"]
+
+
+@dataclass(frozen=True)
+class _Extras:
+    zones: gpd.GeoDataFrame | None
+    unsurveyed: gpd.GeoDataFrame | None
+    grid: Grid | None
+    warnings: list[str]
+
+
+def analyse(
+    points: PathLike,
+    area: PathLike,
+    *,
+    out: str | Path,
+    points_layer: str | None = None,
+    area_layer: str | None = None,
+    model: str = "thomas",
+    zones: PathLike | None = None,
+    zones_layer: str | None = None,
+    unsurveyed: PathLike | None = None,
+    unsurveyed_layer: str | None = None,
+    like: PathLike | None = None,
+    cell: float | None = None,
+    seed: int | None = None,
+    overwrite: bool = False,
+    crs: object | None = None,
+    x_column: str | None = None,
+    y_column: str | None = None,
+    metric_crs: object | None = None,
+    repair: bool = False,
+    simulations: int = 999,
+    workers: int | None = None,
+    progress: Progress | None = None,
+    command: str | None = None,
+    title: str | None = None,
+) -> Analysis:
+    """Do the whole job: read, describe, fit, locate, and write one folder of results.
+
+    Parameters
+    ----------
+    points, area, points_layer, area_layer, crs, x_column, y_column, metric_crs, repair
+        As for `read_survey`.
+    out
+        Folder for the results; it appears whole at the end or not at all.
+    model
+        Name of the cluster model.
+    zones, zones_layer
+        Polygons to give numbers of points and centres for.
+    unsurveyed, unsurveyed_layer
+        Polygons that nobody walked, to predict for.
+    like, cell
+        Template raster whose grid the maps follow, or cell size in metres.
+    seed
+        Seed of all random numbers; drawn, and reported, if not given.
+    overwrite
+        Whether earlier results in `out` may be replaced.
+    simulations
+        Patterns of complete randomness for the envelopes.
+    workers
+        Threads; one a core if not given. The results do not depend on it.
+    progress
+        Called with label, done, total.
+    command, title
+        Shown in the report.
+
+    Returns
+    -------
+    Analysis
+
+    Raises
+    ------
+    InputError, UsageError, OutputError
+        One sentence; nothing is written then.
+    """
+    model_by_name(model)
+    if like is not None and cell is not None:
+        raise UsageError("Give either a template raster or a cell size, not both.")
+    if simulations < 39:
+        raise not_allowed("simulations", "at least 39", simulations)
+    used_seed = secrets.randbits(32) if seed is None else int(seed)
+    if used_seed < 0:
+        raise not_allowed("seed", "a whole number, not negative", seed)
+    with results_folder(out, overwrite) as folder:
+        survey = read_survey(
+            points, area, points_layer=points_layer, area_layer=area_layer, crs=crs, x_column=x_column,
+            y_column=y_column, metric_crs=metric_crs, repair=repair,
+        )  # fmt: skip
+        extras = _read_extras(survey, zones, zones_layer, unsurveyed, unsurveyed_layer, like, crs, repair)
+        found = _analyse_survey(
+            survey, extras, model=model, cell=cell, seed=used_seed, simulations=simulations,
+            workers=workers, progress=progress, out=Path(out),
+        )  # fmt: skip
+        _write_all(folder, found, extras, command, title or _title(points), workers, progress)
+    return found
+
+
+def _title(points: PathLike) -> str:
+    return Path(str(points)).stem.replace("_", " ")
+
+
+def _read_extras(
+    survey: Survey,
+    zones: PathLike | None,
+    zones_layer: str | None,
+    unsurveyed: PathLike | None,
+    unsurveyed_layer: str | None,
+    like: PathLike | None,
+    crs: object | None,
+    repair: bool,
+) -> _Extras:
+    warnings: list[str] = []
+
+    def polygons(path: PathLike | None, layer: str | None) -> gpd.GeoDataFrame | None:
+        if path is None:
+            return None
+        found = read_polygons(path, crs=survey.area.crs, layer=layer, stated_crs=crs, repair=repair)
+        warnings.extend(found.attrs.get("warnings", []))
+        return found
+
+    return _Extras(
+        polygons(zones, zones_layer),
+        polygons(unsurveyed, unsurveyed_layer),
+        None if like is None else grid_like(str(like)),
+        warnings,
+    )
+
+
+def _analyse_survey(
+    survey: Survey,
+    extras: _Extras,
+    *,
+    model: str,
+    cell: float | None,
+    seed: int,
+    simulations: int,
+    workers: int | None,
+    progress: Progress | None,
+    out: Path,
+) -> Analysis:
+    envelope_seed, fit_seed, centre_seed = np.random.default_rng(seed).spawn(3)
+    envelopes: dict[str, EnvelopeTest] = {}
+    fit: ClusterFit | None = None
+    centres: CentreMap | None = None
+    status, reason = "ok", ""
+    choices: dict[str, object] = {"edge_weight": "isotropic", "model": model, "simulations": simulations}
+    if survey.n >= 2:
+        radii = default_radii(survey.area)
+        envelopes = randomness_envelopes(
+            survey, radii, simulations=simulations, rng=envelope_seed, workers=workers, progress=progress
+        )
+        choices["r_max_m"] = float(radii[-1])
+        choices["bandwidth_m"] = envelopes["g"].curve.bandwidth
+    try:
+        fit = fit_clusters(survey, model, rng=fit_seed, workers=workers, progress=progress)
+        status, reason = fit.status, fit.reason
+        if fit.ok:
+            centres = locate_centres(
+                survey, fit, cell=cell, like=extras.grid, zones=extras.zones, unsurveyed=extras.unsurveyed,
+                rng=centre_seed, workers=workers, progress=progress,
+            )  # fmt: skip
+    except CannotTell as verdict:
+        status, reason = verdict.status, str(verdict)
+    return Analysis(
+        status, reason, survey, envelopes, fit, centres, choices, seed, out, list(extras.warnings)
+    )
+
+
+def curve_table(
+    envelopes: Mapping[str, EnvelopeTest], fit: ClusterFit | None, survey: Survey
+) -> pd.DataFrame:
+    """All curves in the columns of curves.csv: K, L and g of the survey, and the fitted curve."""
+    frames = []
+    if "L" in envelopes:
+        k = k_function(survey, envelopes["L"].curve.radii)
+        frames.append(k.to_frame())
+        frames += [test.curve.to_frame() for test in envelopes.values()]
+    if fit is not None:
+        c = fit.curve
+        name = f"{c.function} fitted, {fit.model.name}"
+        frames.append(
+            Curve(name, c.radii, c.values, fit.fitted, c.unit, c.edge_weight, c.bandwidth).to_frame()
+        )
+    columns = ["function", "r_m", "estimate", "theory", "lower", "upper"]
+    return pd.concat(frames, ignore_index=True) if frames else pd.DataFrame(columns=columns)
+
+
+def _write_all(
+    folder: Path,
+    found: Analysis,
+    extras: _Extras,
+    command: str | None,
+    title: str,
+    workers: int | None,
+    progress: Progress | None,
+) -> None:
+    survey, fit, centres = found.survey, found.fit, found.centres
+    record = fit_record(
+        status=found.status, reason=found.reason, fit=fit, envelopes=found.envelopes, centres=centres,
+        audit=survey.audit, choices=found.choices, seed=found.seed,
+    )  # fmt: skip
+    write_record(folder / "fit.json", record)
+    try:
+        curve_table(found.envelopes, fit, survey).to_csv(folder / "curves.csv", index=False)
+    except OSError as error:
+        raise OutputError(f"curves.csv could not be written: {error.strerror}.") from error
+    package = folder / "results.gpkg"
+    renamed = _write_package(package, found, extras)
+    pattern_seed = np.random.default_rng(found.seed).spawn(4)[3]
+    with PatternWriter(
+        package, "simulated_points", survey.area.crs, layer_crs=survey.points_crs, into_package=True
+    ) as sink:
+        source: ClusterFit | float = fit if fit is not None and found.status == "ok" else survey.intensity
+        simulate_patterns(
+            source, survey.area, PATTERNS, rng=pattern_seed, sink=sink, workers=workers, progress=progress
+        )
+    files = [(name, meaning) for name, meaning in FILES if centres is not None or name[-4:] != ".tif"]
+    sheets = styles.vector_styles()
+    if centres is not None:
+        centres.write(folder / "centre_intensity.tif")
+        sheets["centre_intensity"] = styles.centre_intensity_style(centres.mean)
+    styles.write_styles(folder, sheets)
+    for layer, names in renamed.items():
+        for old, new in names.items():
+            found.notes.append(f"column {old} of layer {layer} is called {new} in results.gpkg")
+    write_page(
+        folder / "report.html",
+        survey=survey,
+        audit=survey.audit,
+        envelopes=found.envelopes or None,
+        fit=fit,
+        status=found.status,
+        reason=found.reason,
+        centres=centres,
+        choices=found.choices | {"seed": found.seed},
+        versions=library_versions(),
+        command=command,
+        title=title,
+        files=files,
+    )
+
+
+def _write_package(path: Path, found: Analysis, extras: _Extras) -> dict[str, dict[str, str]]:
+    survey, centres = found.survey, found.centres
+    crs = survey.points_crs
+    attributes = survey.attributes
+    if attributes is None:
+        attributes = gpd.GeoDataFrame(geometry=gpd.points_from_xy(*survey.xy.T), crs=survey.area.crs)
+    if centres is not None:
+        ours: dict[str, Any] = {name: centres.points[name].to_numpy() for name in centres.points}
+    else:
+        nothing = np.full(survey.n, np.nan)
+        ours = {
+            "cluster": pd.array([pd.NA] * survey.n, dtype="Int64"),
+            "membership_probability": nothing,
+            "background_probability": nothing,
+        }
+    with_ours, renamed = with_our_columns(attributes, ours)
+    layers = {"points": with_ours, "study_area": _study_area_layer(survey, crs)}
+    if centres is not None:
+        layers["clusters"] = _moved(centres.clusters, crs)
+    numbered = {
+        "zones": (extras.zones, centres.zones if centres is not None else None),
+        "unsurveyed": (extras.unsurveyed, centres.unsurveyed if centres is not None else None),
+    }
+    for name, (given, answered) in numbered.items():
+        if answered is not None or given is not None:
+            layers[name] = _moved(answered if answered is not None else given, crs)
+    all_styles = styles.vector_styles(_label_column(extras.zones))
+    chosen = {name: text for name, text in all_styles.items() if name in layers or name == "simulated_points"}
+    changed = dict(write_package(path, layers, chosen))
+    if renamed:
+        changed["points"] = renamed | changed.get("points", {})
+    return changed
+
+
+def _label_column(zones: gpd.GeoDataFrame | None) -> str | None:
+    """The first column of text, which names the zones."""
+    if zones is None:
+        return None
+    names = [c for c in zones.columns if c != zones.geometry.name and pd.api.types.is_string_dtype(zones[c])]
+    return names[0] if names else None
+
+
+def _study_area_layer(survey: Survey, crs: object) -> gpd.GeoDataFrame:
+    layer = gpd.GeoDataFrame(
+        {"area_ha": [survey.area.area / 1e4], "perimeter_m": [survey.area.perimeter], "points": [survey.n]},
+        geometry=[survey.area.polygon],
+        crs=survey.area.crs,
+    )
+    return _moved(layer, crs)
+
+
+def _moved(layer: gpd.GeoDataFrame, crs: object) -> gpd.GeoDataFrame:
+    return layer if layer.crs is None or crs is None or layer.crs == crs else layer.to_crs(crs)
