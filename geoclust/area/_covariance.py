@@ -163,7 +163,7 @@ def covariance(tree, grid, hx, hy, whole, hair, stack, first_at, first_sign, bal
         return whole
     for attempt in range(12):
         turn = 0.7548776662466927 + 2.399963229728653 * attempt
-        d = hair * (1.0 + 0.7 * attempt)
+        d = hair * 2.0**attempt
         found, balanced = common_area(
             tree, grid, hx + d * np.cos(turn), hy + d * np.sin(turn), stack, first_at, first_sign, balance
         )

@@ -3,21 +3,20 @@
 from __future__ import annotations
 
 from functools import cached_property
-from typing import Any
 
 import numpy as np
 import numpy.typing as npt
 import shapely
 from affine import Affine
-from pyproj import CRS
-from shapely.geometry.polygon import orient
 
 from geoclust.area import _cells, _circles, _covariance, _edges, _gaussian
+from geoclust.area.checks import Floats, checked_crs, checked_points, checked_polygon, example, spread
 from geoclust.area.covariance import edge_tree, isotropised, set_covariance
-from geoclust.errors import InputError, UsageError, not_allowed
+from geoclust.errors import UsageError, not_allowed
 from geoclust.workers import in_order
 
-Floats = npt.NDArray[np.float64]
+__all__ = ["Floats", "StudyArea", "checked_points", "portions"]
+
 # circles per portion of threaded work: large enough to hide the cost of a task
 PORTION = 20_000
 
@@ -50,13 +49,9 @@ class StudyArea:
     """
 
     def __init__(self, polygon: shapely.Polygon | shapely.MultiPolygon, crs: object = None) -> None:
-        self.polygon = _checked_polygon(polygon)
-        self.crs = _checked_crs(crs)
-        rings = [
-            ring
-            for part in self.polygon.geoms
-            for ring in (part.exterior, *part.interiors)
-        ]
+        self.polygon = checked_polygon(polygon)
+        self.crs = checked_crs(crs)
+        rings = [ring for part in self.polygon.geoms for ring in (part.exterior, *part.interiors)]
         minx, miny, maxx, maxy = self.polygon.bounds
         # whole metres, so that coordinates on a lattice stay on it after the shift
         self.origin = np.array([np.round((minx + maxx) / 2), np.round((miny + maxy) / 2)])
@@ -195,9 +190,9 @@ class StudyArea:
             If the shapes do not fit, or a radius is negative or not finite.
         """
         at = self.local(centres, "centres")
-        r = _spread(radii, len(at), "radii")
+        r = spread(radii, len(at), "radii")
         if not np.all(np.isfinite(r)) or np.any(r < 0):
-            raise not_allowed("radii", "finite and not negative", _example(radii))
+            raise not_allowed("radii", "finite and not negative", example(radii))
         out = np.empty(len(at))
         grid = self.grid
 
@@ -303,9 +298,9 @@ class StudyArea:
             If the shapes do not fit, or a sigma is not positive and finite.
         """
         at = self.local(centres, "centres")
-        s = _spread(sigma, len(at), "sigma")
+        s = spread(sigma, len(at), "sigma")
         if not np.all(np.isfinite(s)) or np.any(s <= 0):
-            raise not_allowed("sigma", "positive and finite", _example(sigma))
+            raise not_allowed("sigma", "positive and finite", example(sigma))
         out = np.empty(len(at))
         grid = self.grid
 
@@ -427,64 +422,3 @@ class StudyArea:
 def portions(count: int, size: int = PORTION) -> list[slice]:
     """Cut `count` items into consecutive slices."""
     return [slice(a, min(a + size, count)) for a in range(0, count, size)]
-
-
-def checked_points(xy: npt.ArrayLike, name: str = "xy") -> Floats:
-    """Return coordinates as an (n, 2) float64 array, or say what is wrong with them."""
-    at = np.asarray(xy, dtype=np.float64)
-    if at.size == 0:
-        return np.empty((0, 2))
-    if at.ndim != 2 or at.shape[1] != 2:
-        raise UsageError(f"{name} must be an array of shape (n, 2); got shape {at.shape}.")
-    if not np.all(np.isfinite(at)):
-        bad = int(np.sum(~np.isfinite(at).all(axis=1)))
-        raise UsageError(f"{name} must hold finite coordinates; {bad} of {len(at)} rows do not.")
-    return at
-
-
-def _checked_polygon(polygon: Any) -> shapely.MultiPolygon:
-    if isinstance(polygon, shapely.Polygon):
-        polygon = shapely.MultiPolygon([polygon]) if not polygon.is_empty else shapely.MultiPolygon()
-    if not isinstance(polygon, shapely.MultiPolygon):
-        raise InputError(
-            f"The study area must be a polygon or multipolygon; got a {type(polygon).__name__}."
-        )
-    polygon = shapely.force_2d(polygon)
-    if polygon.is_empty or polygon.area <= 0:
-        raise InputError("The study area has no area; give the polygon in which individuals were mapped.")
-    if not polygon.is_valid:
-        raise InputError(
-            f"The study area is not a valid polygon ({shapely.is_valid_reason(polygon)}); repair it first."
-        )
-    return shapely.MultiPolygon([orient(part) for part in polygon.geoms if part.area > 0])
-
-
-def _checked_crs(crs: object) -> CRS | None:
-    if crs is None:
-        return None
-    found = CRS.from_user_input(crs)
-    if not found.is_projected:
-        raise InputError(
-            f"The study area is in {found.name}, which is not a projected system; "
-            "transform it to one in metres before measuring distances."
-        )
-    units = {axis.unit_conversion_factor for axis in found.axis_info[:2]}
-    if units and units != {1.0}:
-        name = found.axis_info[0].unit_name
-        raise InputError(f"The study area is in {found.name}, measured in {name}; transform it to metres.")
-    return found
-
-
-def _spread(values: npt.ArrayLike, count: int, name: str) -> Floats:
-    given = np.asarray(values, dtype=np.float64)
-    if given.ndim == 0:
-        return np.full(count, float(given))
-    if given.shape != (count,):
-        raise UsageError(f"{name} must be one number or one a centre ({count}); got shape {given.shape}.")
-    return np.ascontiguousarray(given)
-
-
-def _example(values: npt.ArrayLike) -> float:
-    given = np.asarray(values, dtype=np.float64).ravel()
-    wrong = given[~np.isfinite(given) | (given <= 0)]
-    return float(wrong[0]) if len(wrong) else float(given[0])
