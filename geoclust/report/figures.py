@@ -1,0 +1,186 @@
+"""Figures that are no maps: curves, the surface of the contrast, numbers of centres, zones."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+import numpy as np
+from matplotlib.figure import Figure
+from matplotlib.ticker import FuncFormatter, MaxNLocator
+
+from geoclust.report import canvas
+from geoclust.report.canvas import Floats
+
+if TYPE_CHECKING:
+    import geopandas as gpd
+    from matplotlib.axes import Axes
+
+    from geoclust.centres.result import CentreMap
+    from geoclust.curves.envelopes import EnvelopeTest
+    from geoclust.fitting.result import ClusterFit
+
+_SIZE = (5.2, 3.6)
+# contrast in units of its minimum up to which the valley is shaded: there fits are hardly told apart
+VALLEY = 1.25
+_LEVELS = (1.05, VALLEY, 2.0, 4.0, 8.0, 16.0)
+
+
+def curve_figure(test: EnvelopeTest, *, fit: ClusterFit | None = None) -> Figure:
+    """L(r) − r or g(r) with its global envelope, and the curve of the fitted model if there is one.
+
+    Parameters
+    ----------
+    test
+        The survey's curve in its envelope; L, g or K.
+    fit
+        A fit whose model is drawn as well.
+    """
+    curve = test.curve
+    r = curve.radii
+    off = r if curve.function == "L" else np.zeros_like(r)
+    with canvas.look():
+        figure, ax = _axes()
+        if curve.lower is not None and curve.upper is not None:
+            # one-sided envelopes have no other limit: they run out of the picture
+            span = _span(curve.values - off, curve.upper - off, curve.lower - off)
+            low = np.where(np.isfinite(curve.lower), curve.lower - off, span[0])
+            high = np.where(np.isfinite(curve.upper), curve.upper - off, span[1])
+            ax.fill_between(r, low, high, color=canvas.BAND, lw=0, label="range of complete randomness")
+        ax.plot(r, curve.theory - off, color=canvas.INK, lw=0.9, ls=(0, (4, 3)), label="expected at random")
+        if fit is not None:
+            modelled = {"L": fit.model.l_function, "g": fit.model.pair_correlation, "K": fit.model.k_function}
+            ax.plot(r, modelled[curve.function](r) - off, color=canvas.UNSURE, lw=2.2, label="fitted clusters")
+        ax.plot(r, curve.values - off, color=canvas.CLUSTER, lw=1.6, label="survey")
+        name = "L(r) − r (m)" if curve.function == "L" else f"{curve.function}(r)"
+        ax.set_ylabel(f"{name} (m²)" if curve.function == "K" else name)
+        ax.set_xlabel("distance r (m)")
+        ax.set_xlim(0, r[-1])
+        ax.set_ylim(*_span(curve.values - off, *([] if fit is None else [modelled[curve.function](r) - off]),
+                           curve.theory - off, *_finite_limits(test, off)))  # fmt: skip
+        ax.legend(loc="upper right", handlelength=1.6)
+        return figure
+
+
+def contrast_figure(fit: ClusterFit) -> Figure | None:
+    """The contrast over parent intensity and scale, its lowest place and the valley round it.
+
+    None if the fit has no such surface.
+    """
+    surface = fit.surface
+    if surface is None:
+        return None
+    rho = surface.parent_intensities * 1e4
+    ratio = surface.contrast / np.nanmin(surface.contrast)
+    scale = fit.parameters[surface.scale_name]
+    with canvas.look():
+        figure, ax = _axes()
+        top = max(float(np.nanmax(ratio)), 2.0)
+        shown = np.minimum(ratio, 32.0)
+        levels = np.geomspace(1.0, min(top, 32.0), 13)
+        # dark is low: the valley is the deep part
+        ax.contourf(rho, surface.scales, shown.T, levels=levels, cmap=canvas.RAMP_COLOURS.reversed(), extend="max",
+                    norm="log")  # fmt: skip
+        lines = [level for level in _LEVELS if level < top]
+        drawn = ax.contour(rho, surface.scales, ratio.T, levels=lines, colors="white", linewidths=0.8)
+        ax.clabel(drawn, fmt=lambda v: f"×{v:g}", fontsize=8)
+        if lines:
+            ax.contour(rho, surface.scales, ratio.T, levels=[lines[min(1, len(lines) - 1)]], colors="white",
+                       linewidths=1.8)  # fmt: skip
+        ax.plot(fit.parameters["parent_intensity"] * 1e4, scale, marker="o", ms=8, mfc=canvas.UNSURE, mec="white",
+                mew=1.4, ls="none", label="best fit")  # fmt: skip
+        ax.set_xscale("log")
+        ax.set_yscale("log")
+        ax.set_xlim(*_window(rho, (ratio < 4.0).any(axis=1)))
+        ax.set_ylim(*_window(surface.scales, (ratio < 4.0).any(axis=0)))
+        for axis in (ax.xaxis, ax.yaxis):
+            axis.set_major_formatter(FuncFormatter(lambda v, _: f"{v:g}"))
+            axis.set_minor_formatter(FuncFormatter(_one_two_five))
+            axis.set_tick_params(which="minor", labelsize=9)
+        ax.set_xlabel("cluster centres per hectare (ha⁻¹)")
+        ax.set_ylabel(f"{surface.scale_name.replace('_', ' ')} (m)")
+        ax.legend(loc="upper right", labelcolor="white", framealpha=0.0)
+        return figure
+
+
+def number_figure(centres: CentreMap) -> Figure:
+    """How often each number of centres inside the study area came up in the sample."""
+    draws = np.asarray(centres.number_inside).ravel()
+    mean, low, high = centres.interval_inside()
+    width = max(1, int(np.ceil((draws.max() - draws.min() + 1) / 45)))
+    edges = np.arange(draws.min(), draws.max() + width + 1, width) - 0.5
+    shares, _ = np.histogram(draws, edges)
+    middles = 0.5 * (edges[1:] + edges[:-1])
+    inside = (middles >= low - width / 2) & (middles <= high + width / 2)
+    with canvas.look():
+        figure, ax = _axes()
+        heights = 100 * shares / len(draws)
+        ax.bar(middles[inside], heights[inside], 0.92 * width, color=canvas.CLUSTER, label="95 % interval")
+        ax.bar(middles[~inside], heights[~inside], 0.92 * width, color=canvas.BAND, label="beyond it")
+        ax.axvline(mean, color=canvas.UNSURE, lw=2, label="mean")
+        ax.set_xlabel("number of cluster centres inside the study area")
+        ax.set_ylabel("share of the sample (%)")
+        ax.xaxis.set_major_locator(MaxNLocator(integer=True, nbins=8))
+        ax.set_ylim(0, 1.25 * heights.max())
+        ax.legend(loc="upper left", ncols=3, handlelength=1.2, columnspacing=1.2)
+        return figure
+
+
+def zones_figure(zones: gpd.GeoDataFrame, names: list[str]) -> Figure:
+    """Cluster centres per hectare in each zone, with 95 % intervals.
+
+    Parameters
+    ----------
+    zones
+        With the columns `centres_mean`, `centres_low`, `centres_high`, `area_ha`.
+    names
+        Name of each zone, row by row.
+    """
+    hectares = zones["area_ha"].to_numpy(dtype=float)
+    with np.errstate(invalid="ignore", divide="ignore"):
+        mean, low, high = (zones[f"centres_{k}"].to_numpy(dtype=float) / hectares for k in ("mean", "low", "high"))
+    rows = np.arange(len(zones))[::-1]
+    with canvas.look():
+        figure, ax = _axes((5.2, 1.0 + 0.36 * max(len(zones), 2)))
+        ax.hlines(rows, low, high, color=canvas.CLUSTER, lw=2.2)
+        ax.plot(mean, rows, "o", ms=6.5, mfc=canvas.UNSURE, mec=canvas.INK, mew=0.8)
+        ax.set_yticks(rows, [name if len(name) <= 28 else f"{name[:27]}…" for name in names])
+        ax.set_ylim(-0.6, len(zones) - 0.4)
+        ax.set_xlim(left=0)
+        ax.set_xlabel("cluster centres per hectare (ha⁻¹)")
+        ax.grid(axis="x", color=canvas.BAND, lw=0.7)
+        ax.set_axisbelow(True)
+        ax.spines["left"].set_visible(False)
+        ax.tick_params(axis="y", length=0)
+        return figure
+
+
+def _axes(size: tuple[float, float] = _SIZE) -> tuple[Figure, Axes]:
+    figure = Figure(figsize=size, layout="constrained", facecolor="white")
+    return figure, figure.add_subplot()
+
+
+def _finite_limits(test: EnvelopeTest, off: Floats) -> list[Floats]:
+    limits = [test.curve.lower, test.curve.upper]
+    return [v - off for v in limits if v is not None and np.isfinite(v).any()]
+
+
+def _span(*curves: Floats) -> tuple[float, float]:
+    """Lowest and highest value that the picture has to hold, with room for the key on top."""
+    values = np.concatenate([c[np.isfinite(c)] for c in curves]) if curves else np.zeros(1)
+    low, high = (float(values.min()), float(values.max())) if values.size else (0.0, 1.0)
+    height = max(high - low, 1e-9 * max(abs(high), 1.0), 1e-12)
+    return low - 0.05 * height, high + 0.12 * height
+
+
+def _window(values: Floats, low: np.ndarray) -> tuple[float, float]:
+    """The part of a logarithmic axis where the contrast is low, with as much again on either side."""
+    inside = np.log(values[low]) if low.any() else np.log(values)
+    wide = max(inside.max() - inside.min(), np.log(3.0))
+    first, last = inside.min() - 0.5 * wide, inside.max() + 0.5 * wide
+    return float(max(values[0], np.exp(first))), float(min(values[-1], np.exp(last)))
+
+
+def _one_two_five(value: float, _: int) -> str:
+    """Labels of the minor ticks of a logarithmic axis: only those that begin with 2 or 5."""
+    lead = value / 10.0 ** np.floor(np.log10(value) + 1e-9)
+    return f"{value:g}" if min(abs(lead - 2), abs(lead - 5)) < 1e-6 else ""
