@@ -10,6 +10,7 @@ from geoclust.centres.locate import locate_centres
 from geoclust.centres.result import CentreMap
 from geoclust.curves.curve import Curve
 from geoclust.curves.envelopes import global_envelope, randomness_envelopes
+from geoclust.curves.nearest import empty_space_function, j_function, nearest_neighbour_function
 from geoclust.curves.second_order import k_function, l_function, pair_correlation
 from geoclust.errors import CannotTell, GeoclustError, InputError, OutputError, UsageError
 from geoclust.fitting.fit import fit_clusters
@@ -35,11 +36,14 @@ __all__ = [
     "__version__",
     "analyse",
     "audit_survey",
+    "empty_space_function",
     "fit_clusters",
     "global_envelope",
+    "j_function",
     "k_function",
     "l_function",
     "locate_centres",
+    "nearest_neighbour_function",
     "pair_correlation",
     "randomness_envelopes",
     "read_survey",

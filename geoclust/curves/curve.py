@@ -22,7 +22,7 @@ class Curve:
     Attributes
     ----------
     function
-        ``K``, ``L`` or ``g``.
+        ``K``, ``L``, ``g``, ``G``, ``F`` or ``J``.
     radii
         (k,) distances in metres.
     values
@@ -32,7 +32,7 @@ class Curve:
     unit
         Unit of the values: ``m²``, ``m`` or ``1``.
     edge_weight
-        How pairs were weighted for the boundary.
+        How pairs were weighted for the boundary, or how it was allowed for.
     bandwidth
         Half width of the kernel in metres, where there is one.
     lower, upper
@@ -53,7 +53,7 @@ class Curve:
     interval: str | None = None
 
     def __repr__(self) -> str:
-        parts = [f"{len(self.radii)} radii to {self.radii[-1]:.4g} m", f"{self.edge_weight} edge weight"]
+        parts = [f"{len(self.radii)} radii to {self.radii[-1]:.4g} m", _boundary(self.edge_weight)]
         if self.bandwidth is not None:
             parts.append(f"bandwidth {self.bandwidth:.4g} m")
         if self.interval is not None:
@@ -110,3 +110,8 @@ class Curve:
         ax.set_ylabel(name if self.unit == "1" else f"{name} ({self.unit})")
         ax.margins(x=0)
         return ax
+
+
+def _boundary(edge_weight: str) -> str:
+    """How the boundary was allowed for, in words."""
+    return "Kaplan-Meier estimate" if edge_weight == "kaplan-meier" else f"{edge_weight} edge weight"
