@@ -203,3 +203,34 @@ def fill_boxes(x0, y0, x1, y1, low, high, box):
             for side in range(2):
                 box[n, side] = min(box[c, side], box[c + 1, side])
                 box[n, 2 + side] = max(box[c, 2 + side], box[c + 1, 2 + side])
+
+
+@njit(nogil=True, cache=True, inline="always")
+def look_up(values, row_scale, column_scale, dx, dy, d):
+    """Interpolate a table of shifts linearly at (dx, dy) of length d."""
+    row = d * row_scale
+    i = min(int(row), values.shape[0] - 2)
+    s = row - i
+    if values.shape[1] == 1:
+        return (1.0 - s) * values[i, 0] + s * values[i + 1, 0]
+    if dy < 0.0:
+        dx, dy = -dx, -dy
+    span = abs(dx) + dy
+    if span == 0.0:
+        return values[0, 0]
+    turn = dy / span if dx >= 0.0 else 2.0 - dy / span
+    column = turn * column_scale
+    j = min(int(column), values.shape[1] - 2)
+    t = column - j
+    return (1.0 - s) * ((1.0 - t) * values[i, j] + t * values[i, j + 1]) + s * (
+        (1.0 - t) * values[i + 1, j] + t * values[i + 1, j + 1]
+    )
+
+
+@njit(nogil=True, cache=True)
+def look_up_many(values, row_scale, column_scale, shifts):
+    out = np.empty(shifts.shape[0])
+    for k in range(shifts.shape[0]):
+        dx, dy = shifts[k, 0], shifts[k, 1]
+        out[k] = look_up(values, row_scale, column_scale, dx, dy, np.sqrt(dx * dx + dy * dy))
+    return out

@@ -11,7 +11,14 @@ from affine import Affine
 
 from geoclust.area import _cells, _circles, _covariance, _edges, _gaussian
 from geoclust.area.checks import Floats, checked_crs, checked_points, checked_polygon, example, spread
-from geoclust.area.covariance import edge_tree, isotropised, set_covariance
+from geoclust.area.covariance import (
+    ShiftTable,
+    edge_tree,
+    isotropised,
+    isotropised_table,
+    set_covariance,
+    shift_table,
+)
 from geoclust.errors import UsageError, not_allowed
 from geoclust.workers import in_order
 
@@ -69,6 +76,7 @@ class StudyArea:
         )
         self._reached: dict[bytes, Floats] = {}
         self._dilated: dict[float, StudyArea] = {}
+        self._tables: dict[tuple[float, bool], ShiftTable] = {}
         self.perimeter: float = float(np.hypot(*(self._ends - self._starts).T).sum())
 
     def __repr__(self) -> str:
@@ -266,6 +274,21 @@ class StudyArea:
         if positive.any():
             out[positive] = isotropised(self, known[positive], workers)
         return out[where]
+
+    def shift_table(
+        self, largest: float, *, isotropic: bool = False, workers: int | None = None
+    ) -> ShiftTable:
+        """Table of the set covariance of shifts up to `largest` metres, or of its mean over directions.
+
+        Built at the first call for a distance and kept: simulations ask for it over and over.
+        """
+        key = (largest, isotropic)
+        known = self._tables.get(key)
+        if known is None:
+            make = isotropised_table if isotropic else shift_table
+            known = make(self, largest, workers)
+            self._tables = {key: known}
+        return known
 
     @cached_property
     def diameter(self) -> float:

@@ -30,6 +30,7 @@ class SortedPoints(NamedTuple):
     x: np.ndarray  # (n,)
     y: np.ndarray
     weight: np.ndarray  # (n,) factor of each point, or (0,) if all are one
+    lead: np.ndarray  # (n,) one half for first points, zero for others, or (0,) if all are first points
     depth: np.ndarray  # (n,) distance to the boundary, capped at the largest distance; (0,) if unused
     first: np.ndarray  # (cells + 1,)
     columns: int
@@ -112,54 +113,59 @@ def deep_cells(occupied, columns, rows, reach):
 
 
 @njit(nogil=True, cache=True)
-def add_pairs(points, classes, row_low, row_high, factor, out):
-    """Add `factor` times the weights of all unordered pairs whose first point lies in these rows.
+def add_pairs(points, classes, low, high, out):
+    """Add the weights of all unordered pairs whose first point lies in cells `low` to `high`, twice.
 
     `out` is (classes, 3): sums of w/d, w and w d. Coincident pairs are counted
     in w alone: their distance is zero.
     """
     x, y, weight, first, columns = points.x, points.y, points.weight, points.first, points.columns
     weighted = weight.size > 0
+    led = points.lead.size > 0
     last = classes.squared[-1]
     # squared distances of a run of candidates, and which of them are near enough
     near_d2 = np.empty(1024)
-    near_k = np.empty(1024, np.int32)
-    for j in range(row_low, min(row_high, points.rows)):
-        for i in range(columns):
-            c = j * columns + i
-            for a in range(first[c], first[c + 1]):
-                ax, ay = x[a], y[a]
-                for up in range(FINE + 1):
-                    jj = j + up
-                    if jj >= points.rows:
-                        break
-                    if up == 0:
-                        run = a + 1
-                    else:
-                        run = first[jj * columns + max(i - FINE, 0)]
-                    end = first[jj * columns + min(i + FINE, columns - 1) + 1]
-                    while run < end:
-                        stop = min(end, run + 1024)
-                        found = 0
-                        for b in range(run, stop):
-                            dx = x[b] - ax
-                            dy = y[b] - ay
-                            d2 = dx * dx + dy * dy
-                            near_d2[found] = d2
-                            near_k[found] = b
-                            found += 1 if d2 <= last else 0
-                        for h in range(found):
-                            d2 = near_d2[h]
-                            d = np.sqrt(d2)
-                            w = factor * weight[a] * weight[near_k[h]] if weighted else factor
-                            k = classes.guess[int(d * classes.scale)]
-                            while d2 > classes.squared[k]:
-                                k += 1
-                            if d2 > 0.0:
-                                out[k, 0] += w / d
-                            out[k, 1] += w
-                            out[k, 2] += w * d
-                        run = stop
+    near_k = np.empty(1024, np.int64)
+    for c in range(low, high):
+        j = c // columns
+        i = c - j * columns
+        for a in range(first[c], first[c + 1]):
+            ax, ay = x[a], y[a]
+            for up in range(FINE + 1):
+                jj = j + up
+                if jj >= points.rows:
+                    break
+                if up == 0:
+                    run = a + 1
+                else:
+                    run = first[jj * columns + max(i - FINE, 0)]
+                end = first[jj * columns + min(i + FINE, columns - 1) + 1]
+                while run < end:
+                    stop = min(end, run + 1024)
+                    found = 0
+                    for b in range(run, stop):
+                        dx = x[b] - ax
+                        dy = y[b] - ay
+                        d2 = dx * dx + dy * dy
+                        near_d2[found] = d2
+                        near_k[found] = b
+                        found += 1 if d2 <= last else 0
+                    for h in range(found):
+                        d2 = near_d2[h]
+                        d = np.sqrt(d2)
+                        w = 2.0
+                        if weighted:
+                            w *= weight[a] * weight[near_k[h]]
+                        if led:
+                            w *= points.lead[a] + points.lead[near_k[h]]
+                        k = classes.guess[int(d * classes.scale)]
+                        while d2 > classes.squared[k]:
+                            k += 1
+                        if d2 > 0.0:
+                            out[k, 0] += w / d
+                        out[k, 1] += w
+                        out[k, 2] += w * d
+                    run = stop
 
 
 @njit(nogil=True, cache=True)
@@ -197,76 +203,77 @@ def fill_depths(grid, deep, x, y, limit, out):
 
 
 @njit(nogil=True, cache=True)
-def add_isotropic_excess(points, grid, classes, row_low, row_high, out):
+def add_isotropic_excess(points, grid, classes, low, high, out):
     """Add (1/share - 1) for every ordered pair whose first point is near the boundary."""
     x, y, weight, first, columns = points.x, points.y, points.weight, points.first, points.columns
     weighted = weight.size > 0
+    led = points.lead.size > 0
     last = classes.squared[-1]
     largest = np.sqrt(last)
     room = 256
     local = np.empty((4, room))
     reach = largest + 0.5 * grid.cell
-    for j in range(row_low, min(row_high, points.rows)):
-        for i in range(columns):
-            c = j * columns + i
-            for a in range(first[c], first[c + 1]):
-                if points.depth[a] >= largest:
-                    continue
-                ax, ay = x[a], y[a]
-                depth2 = points.depth[a] * points.depth[a]
-                # pieces within reach of the largest circle, once for all neighbours
-                pieces = 0
-                i_low = max(int(np.floor((ax - reach - grid.left) / grid.cell)), 0)
-                i_high = min(int(np.floor((ax + reach - grid.left) / grid.cell)), grid.columns - 1)
-                j_low = max(int(np.floor((ay - reach - grid.bottom) / grid.cell)), 0)
-                j_high = min(int(np.floor((ay + reach - grid.bottom) / grid.cell)), grid.rows - 1)
-                for gj in range(j_low, j_high + 1):
-                    base = gj * grid.columns
-                    k_low, k_high = grid.first[base + i_low], grid.first[base + i_high + 1]
-                    if pieces + k_high - k_low > room:
-                        grown = np.empty((4, 2 * (pieces + k_high - k_low)))
-                        grown[:, :pieces] = local[:, :pieces]
-                        local = grown
-                        room = local.shape[1]
-                    for k in range(k_low, k_high):
-                        ex0, ey0 = grid.x0[k] - ax, grid.y0[k] - ay
-                        ex1, ey1 = grid.x1[k] - ax, grid.y1[k] - ay
-                        ux, uy = ex1 - ex0, ey1 - ey0
-                        t = -(ex0 * ux + ey0 * uy) / (ux * ux + uy * uy)
-                        t = min(max(t, 0.0), 1.0)
-                        px, py = ex0 + t * ux, ey0 + t * uy
-                        if px * px + py * py < last:
-                            local[0, pieces] = ex0
-                            local[1, pieces] = ey0
-                            local[2, pieces] = ex1
-                            local[3, pieces] = ey1
-                            pieces += 1
-                for jj in range(max(j - FINE, 0), min(j + FINE, points.rows - 1) + 1):
-                    run = first[jj * columns + max(i - FINE, 0)]
-                    end = first[jj * columns + min(i + FINE, columns - 1) + 1]
-                    for b in range(run, end):
-                        dx, dy = x[b] - ax, y[b] - ay
-                        d2 = dx * dx + dy * dy
-                        if d2 > last or d2 <= depth2 or a == b:
-                            continue
-                        d = np.sqrt(d2)
-                        re, im, crossings = 1.0, 0.0, 0
-                        for k in range(pieces):
-                            re, im, more = cross_piece(
-                                local[0, k], local[1, k], local[2, k], local[3, k], d2, re, im
-                            )
-                            crossings += more
-                        share = share_from_product(grid, ax, ay, d, re, im, crossings)
-                        if share <= 0.0:
-                            # the neighbour lies on this circle and in W: only rounding brings us here
-                            continue
-                        w = 1.0 / share - 1.0
-                        if weighted:
-                            w *= weight[a] * weight[b]
-                        k = classes.guess[int(d * classes.scale)]
-                        while d2 > classes.squared[k]:
-                            k += 1
-                        if d2 > 0.0:
-                            out[k, 0] += w / d
-                        out[k, 1] += w
-                        out[k, 2] += w * d
+    for c in range(low, high):
+        j = c // columns
+        i = c - j * columns
+        for a in range(first[c], first[c + 1]):
+            if points.depth[a] >= largest or (led and points.lead[a] == 0.0):
+                continue
+            ax, ay = x[a], y[a]
+            depth2 = points.depth[a] * points.depth[a]
+            # pieces within reach of the largest circle, once for all neighbours
+            pieces = 0
+            i_low = max(int(np.floor((ax - reach - grid.left) / grid.cell)), 0)
+            i_high = min(int(np.floor((ax + reach - grid.left) / grid.cell)), grid.columns - 1)
+            j_low = max(int(np.floor((ay - reach - grid.bottom) / grid.cell)), 0)
+            j_high = min(int(np.floor((ay + reach - grid.bottom) / grid.cell)), grid.rows - 1)
+            for gj in range(j_low, j_high + 1):
+                base = gj * grid.columns
+                k_low, k_high = grid.first[base + i_low], grid.first[base + i_high + 1]
+                if pieces + k_high - k_low > room:
+                    grown = np.empty((4, 2 * (pieces + k_high - k_low)))
+                    grown[:, :pieces] = local[:, :pieces]
+                    local = grown
+                    room = local.shape[1]
+                for k in range(k_low, k_high):
+                    ex0, ey0 = grid.x0[k] - ax, grid.y0[k] - ay
+                    ex1, ey1 = grid.x1[k] - ax, grid.y1[k] - ay
+                    ux, uy = ex1 - ex0, ey1 - ey0
+                    t = -(ex0 * ux + ey0 * uy) / (ux * ux + uy * uy)
+                    t = min(max(t, 0.0), 1.0)
+                    px, py = ex0 + t * ux, ey0 + t * uy
+                    if px * px + py * py < last:
+                        local[0, pieces] = ex0
+                        local[1, pieces] = ey0
+                        local[2, pieces] = ex1
+                        local[3, pieces] = ey1
+                        pieces += 1
+            for jj in range(max(j - FINE, 0), min(j + FINE, points.rows - 1) + 1):
+                run = first[jj * columns + max(i - FINE, 0)]
+                end = first[jj * columns + min(i + FINE, columns - 1) + 1]
+                for b in range(run, end):
+                    dx, dy = x[b] - ax, y[b] - ay
+                    d2 = dx * dx + dy * dy
+                    if d2 > last or d2 <= depth2 or a == b:
+                        continue
+                    d = np.sqrt(d2)
+                    re, im, crossings = 1.0, 0.0, 0
+                    for k in range(pieces):
+                        re, im, more = cross_piece(
+                            local[0, k], local[1, k], local[2, k], local[3, k], d2, re, im
+                        )
+                        crossings += more
+                    share = share_from_product(grid, ax, ay, d, re, im, crossings)
+                    if share <= 0.0:
+                        # the neighbour lies on this circle and in W: only rounding brings us here
+                        continue
+                    w = 1.0 / share - 1.0
+                    if weighted:
+                        w *= weight[a] * weight[b]
+                    k = classes.guess[int(d * classes.scale)]
+                    while d2 > classes.squared[k]:
+                        k += 1
+                    if d2 > 0.0:
+                        out[k, 0] += w / d
+                    out[k, 1] += w
+                    out[k, 2] += w * d

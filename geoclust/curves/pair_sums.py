@@ -2,18 +2,30 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 import numpy.typing as npt
 
-from geoclust.area.study_area import StudyArea
-from geoclust.curves import _pairs
+from geoclust.area.covariance import LOW, ShiftTable, hair_of
+from geoclust.area.study_area import StudyArea, portions
+from geoclust.curves import _pairs, _weighted_pairs
+from geoclust.errors import not_allowed
 from geoclust.workers import in_order
 
 Floats = npt.NDArray[np.float64]
-# points per block: the unit of threaded work and of ordered summation
-BLOCK = 8_000
+# most points per block, the unit of threaded work and of ordered summation; and about how
+# many steps a block may take, so that an interrupt is obeyed at once
+BLOCK = 4_000
+STEPS = 5e7
+# up to so many pairs, or if the table is worse than this, each pair's set covariance is exact
+EXACT_PAIRS = 10_000
+WORST_TABLE = 1e-3
+NO_TABLE = ShiftTable(np.zeros((2, 1)), 0.0, 0.0, 0.0)
+
+EDGE_WEIGHTS = ("isotropic", "translation", "rigid-motion", "minus-sampling", "unweighted")
 
 
 @dataclass(frozen=True)
@@ -27,21 +39,28 @@ class PairSums:
     moments
         (c, 3) sums of w/d, w and w d over the pairs in each class. Coincident
         pairs count in the second alone.
+    border
+        (c,) for minus-sampling alone: summed up to a limit, the pairs below it
+        whose first point is deeper than the limit.
     """
 
     edges: Floats
     moments: Floats
+    border: Floats | None = None
 
     def __add__(self, other: PairSums) -> PairSums:
         """Add the sums of another set of first points over the same classes."""
         if not np.array_equal(self.edges, other.edges):
             raise ValueError("pair sums over different classes cannot be added")
+        if self.border is not None or other.border is not None:
+            raise ValueError("sums of minus-sampling are divided by all centres and cannot be added")
         return PairSums(self.edges, self.moments + other.moments)
 
     def up_to(self, radii: Floats) -> Floats:
         """Sum of w over pairs not further apart than each radius; radii must be class limits."""
         at = np.searchsorted(self.edges, radii)
-        return np.asarray(np.cumsum(self.moments[:, 1])[at])
+        sums = self.moments[:, 1] if self.border is None else self.border
+        return np.asarray(np.cumsum(sums)[at])
 
     def kernel_sums(self, radii: Floats, bandwidth: float) -> Floats:
         """Sum of w k(r - d) / d with the Epanechnikov kernel; r - b and r + b must be class limits."""
@@ -75,6 +94,7 @@ def pair_sums(
     *,
     edge_weight: str = "isotropic",
     point_weights: Floats | None = None,
+    first: npt.NDArray[np.bool_] | None = None,
     workers: int | None = None,
 ) -> PairSums:
     """Sum over all ordered pairs in one pass.
@@ -88,9 +108,13 @@ def pair_sums(
     limits
         (c,) upper limits of the distance classes, increasing, positive.
     edge_weight
-        ``isotropic`` or ``unweighted``.
+        One of `EDGE_WEIGHTS`.
     point_weights
         (n,) factor of each point, one over the intensity there for weighted curves.
+    first
+        (n,) the points that count as first of a pair, all if not given. Sums over
+        disjoint sets of first points add up to the whole, so a survey can be
+        summed tile by tile, each with the points around it as partners.
     workers
         Threads; one a core if not given. The sums have the same bits for any number.
     """
@@ -99,35 +123,144 @@ def pair_sums(
     size = max(8 * len(limits), 1024)
     squared = limits * limits
     classes = _pairs.Classes(squared, _pairs.guess_table(squared, size), size / largest)
-    points = _sorted_points(x, y, largest, point_weights)
-    isotropic = edge_weight == "isotropic"
-    if isotropic:
-        grid = area.grid
-        reach = int(np.ceil(largest / grid.cell + 0.5))
-        occupied = np.diff(grid.first) > 0
-        deep = _pairs.deep_cells(occupied, grid.columns, grid.rows, reach)
-        depth = np.empty(len(x))
-        points = points._replace(depth=depth)
+    points = _sorted_points(x, y, largest, point_weights, first)
+    if edge_weight == "unweighted":
+        work, columns = _plain(points, classes), 3
+    elif edge_weight == "isotropic":
+        work, columns = _isotropic(points, classes, area, largest), 3
+    elif edge_weight in ("translation", "rigid-motion"):
+        work, columns = _shifted(points, classes, area, largest, edge_weight, workers), 3
+    elif edge_weight == "minus-sampling":
+        if first is not None:
+            raise not_allowed(
+                "first", "left out with minus-sampling, which needs all centres at once", "some"
+            )
+        work, columns = _deep(points, classes, area, limits, workers), 4
+    else:
+        raise not_allowed("edge_weight", EDGE_WEIGHTS, edge_weight)
 
-    blocks = _row_blocks(points)
-
-    def work(rows: tuple[int, int]) -> Floats:
-        out = np.zeros((len(limits), 3))
-        _pairs.add_pairs(points, classes, rows[0], rows[1], 2.0, out)
-        if isotropic:
-            a, b = (int(points.first[r * points.columns]) for r in rows)
-            _pairs.fill_depths(grid, deep, points.x[a:b], points.y[a:b], largest, depth[a:b])
-            _pairs.add_isotropic_excess(points, grid, classes, rows[0], rows[1], out)
+    def block(cells: tuple[int, int]) -> Floats:
+        out = np.zeros((len(limits), columns))
+        work(cells[0], cells[1], out)
         return out
 
-    total = np.zeros((len(limits), 3))
-    for part in in_order(work, blocks, workers):
+    total = np.zeros((len(limits), columns))
+    for part in in_order(block, _blocks(points, area, largest), workers):
         total += part
-    return PairSums(limits, total)
+    return PairSums(limits, total[:, :3], total[:, 3] if columns == 4 else None)
+
+
+# adds the pairs whose first point lies in a range of cells
+Work = Callable[[int, int, Floats], None]
+
+
+def _plain(points: _pairs.SortedPoints, classes: _pairs.Classes) -> Work:
+    def work(low: int, high: int, out: Floats) -> None:
+        _pairs.add_pairs(points, classes, low, high, out)
+
+    return work
+
+
+def _isotropic(points: _pairs.SortedPoints, classes: _pairs.Classes, area: StudyArea, largest: float) -> Work:
+    """All pairs with weight one, and for points near the boundary what is missing."""
+    grid = area.grid
+    deep = _deep_cells(area, largest)
+    depth = np.empty(len(points.x))
+    known = points._replace(depth=depth)
+
+    def work(low: int, high: int, out: Floats) -> None:
+        _pairs.add_pairs(points, classes, low, high, out)
+        a, b = int(points.first[low]), int(points.first[high])
+        _pairs.fill_depths(grid, deep, points.x[a:b], points.y[a:b], largest, depth[a:b])
+        _pairs.add_isotropic_excess(known, grid, classes, low, high, out)
+
+    return work
+
+
+def _shifted(
+    points: _pairs.SortedPoints,
+    classes: _pairs.Classes,
+    area: StudyArea,
+    largest: float,
+    edge_weight: str,
+    workers: int | None,
+) -> Work:
+    """Pairs over the set covariance of their shift, or its mean over directions."""
+    if edge_weight == "rigid-motion":
+        table, low_share = area.shift_table(largest, isotropic=True, workers=workers), 0.0
+    else:
+        n = len(points.x)
+        # expected under complete randomness: the choice must not hang on anything slower
+        if 0.5 * n * n * min(1.0, np.pi * largest**2 / area.area) <= EXACT_PAIRS:
+            table, low_share = NO_TABLE, 2.0
+        else:
+            table = area.shift_table(largest, workers=workers)
+            low_share = LOW if table.error <= WORST_TABLE else 2.0
+    tree, grid, hair = area.tree, area.grid, hair_of(area)
+
+    def work(low: int, high: int, out: Floats) -> None:
+        _weighted_pairs.add_shifted_pairs(
+            points, classes, table, low_share, tree, grid, area.area, hair, low, high, out
+        )
+
+    return work
+
+
+def _deep(
+    points: _pairs.SortedPoints,
+    classes: _pairs.Classes,
+    area: StudyArea,
+    limits: Floats,
+    workers: int | None,
+) -> Work:
+    """Pairs whose first point is no nearer to the boundary than to the second."""
+    largest = float(limits[-1])
+    depth = depths(points.x, points.y, area, largest, workers)
+    known = points._replace(depth=depth)
+    ordered, tail = depth_sums(depth, points.weight if len(points.weight) else None)
+
+    def work(low: int, high: int, out: Floats) -> None:
+        _weighted_pairs.add_deep_pairs(known, classes, limits, ordered, tail, low, high, out)
+
+    return work
+
+
+def depths(x: Floats, y: Floats, area: StudyArea, largest: float, workers: int | None = None) -> Floats:
+    """Distance of points (local coordinates) to the boundary, capped at `largest`."""
+    grid, deep = area.grid, _deep_cells(area, largest)
+    out = np.empty(len(x))
+
+    def work(part: slice) -> None:
+        _pairs.fill_depths(grid, deep, x[part], y[part], largest, out[part])
+
+    for _ in in_order(work, portions(len(x)), workers):
+        pass
+    return out
+
+
+def depth_sums(depth: Floats, factors: Floats | None) -> tuple[Floats, Floats]:
+    """Depths in increasing order, and the sums of the factors from each of them on, (n + 1,)."""
+    order = np.argsort(depth, kind="stable")
+    ordered = depth[order]
+    each = np.ones(len(depth)) if factors is None else factors[order]
+    tail = np.zeros(len(depth) + 1)
+    tail[:-1] = np.cumsum(each[::-1])[::-1]
+    return ordered, tail
+
+
+def _deep_cells(area: StudyArea, largest: float) -> npt.NDArray[np.bool_]:
+    grid = area.grid
+    reach = int(np.ceil(largest / grid.cell + 0.5))
+    occupied = np.diff(grid.first) > 0
+    return np.asarray(_pairs.deep_cells(occupied, grid.columns, grid.rows, reach))
 
 
 def _sorted_points(
-    x: Floats, y: Floats, largest: float, point_weights: Floats | None
+    x: Floats,
+    y: Floats,
+    largest: float,
+    point_weights: Floats | None,
+    first_points: npt.NDArray[np.bool_] | None,
 ) -> _pairs.SortedPoints:
     n = len(x)
     left, bottom = (float(x.min()), float(y.min())) if n else (0.0, 0.0)
@@ -137,17 +270,21 @@ def _sorted_points(
     cell = max(cell, width / 30_000, height / 30_000)
     columns, rows = int(width / cell) + 1, int(height / cell) + 1
     order, first = _pairs.cell_order(x, y, left, bottom, cell, columns, rows)
-    weight = np.empty(0) if point_weights is None else np.ascontiguousarray(point_weights[order])
-    return _pairs.SortedPoints(x[order], y[order], weight, np.empty(0), first, columns, rows)
+    nothing = np.empty(0)
+    weight = nothing if point_weights is None else np.ascontiguousarray(point_weights[order])
+    lead = nothing if first_points is None else 0.5 * first_points[order].astype(np.float64)
+    return _pairs.SortedPoints(x[order], y[order], weight, lead, nothing, first, columns, rows)
 
 
-def _row_blocks(points: _pairs.SortedPoints) -> list[tuple[int, int]]:
-    """Consecutive rows with about BLOCK points each."""
-    starts = points.first[:: points.columns]
-    blocks: list[tuple[int, int]] = []
-    low = 0
-    for row in range(1, points.rows + 1):
-        if row == points.rows or starts[row] - starts[low] >= BLOCK:
-            blocks.append((low, row))
-            low = row
-    return blocks
+def _blocks(points: _pairs.SortedPoints, area: StudyArea, largest: float) -> list[tuple[int, int]]:
+    """Consecutive cells with about BLOCK points each, fewer if these have many neighbours or edges."""
+    n = len(points.x)
+    disc = np.pi * largest**2
+    neighbours = n * min(1.0, disc / area.area)
+    minx, miny, maxx, maxy = area.bounds
+    pieces = len(area.grid.x0) * min(1.0, disc / ((maxx - minx) * (maxy - miny)))
+    size = int(np.clip(STEPS / ((1.0 + neighbours) * (1.0 + pieces)), 16, BLOCK))
+    # the cell in which each multiple of the size is reached ends a block
+    ends = np.searchsorted(points.first[1:], np.arange(size, n + size, size), side="left") + 1
+    cells = np.unique(np.concatenate([[0], np.minimum(ends, len(points.first) - 1)])).tolist()
+    return list(pairwise(cells))

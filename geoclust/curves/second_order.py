@@ -3,26 +3,38 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import numpy.typing as npt
 
+from geoclust.area.covariance import met_directions
 from geoclust.area.study_area import StudyArea
 from geoclust.area.survey import Survey
 from geoclust.curves.curve import Curve
-from geoclust.curves.pair_sums import PairSums, class_limits, pair_sums
+from geoclust.curves.pair_sums import (
+    EDGE_WEIGHTS,
+    PairSums,
+    class_limits,
+    depth_sums,
+    depths,
+    pair_sums,
+)
 from geoclust.errors import InputError, not_allowed
 
 Floats = npt.NDArray[np.float64]
 
-EDGE_WEIGHTS = ("isotropic", "unweighted")
 # bandwidth of g in mean spacings 1/sqrt(intensity) (Stoyan & Stoyan 1994, p. 285)
 BANDWIDTH_FACTOR = 0.15
 
 
 def k_function(
-    survey: Survey, radii: npt.ArrayLike, edge_weight: str = "isotropic", *, workers: int | None = None
+    survey: Survey,
+    radii: npt.ArrayLike,
+    edge_weight: str = "isotropic",
+    *,
+    intensity_at_points: npt.ArrayLike | None = None,
+    workers: int | None = None,
 ) -> Curve:
     """Ripley's K function.
 
@@ -37,7 +49,15 @@ def k_function(
     radii
         (k,) increasing distances in metres.
     edge_weight
-        ``isotropic`` (Ripley 1977, with the divisor of Ohser 1983) or ``unweighted``.
+        ``isotropic`` (Ripley 1977, with the divisor of Ohser 1983), ``translation``
+        (Ohser & Stoyan 1981), ``rigid-motion`` (Ohser 1983), ``minus-sampling`` (only
+        centres further than r from the boundary) or ``unweighted``.
+    intensity_at_points
+        (n,) intensity at each point, m⁻², for the inhomogeneous K function (Baddeley,
+        Møller & Waagepetersen 2000, Statistica Neerlandica 54: 329-350). Pairs count
+        1/(λ(x)λ(y)), divided by what these factors add up to over all pairs of points,
+        over |W|, in place of |W| itself: the estimate then does not hang on the mean
+        level of the intensity, and is that of the homogeneous K if it is constant.
     workers
         Threads; one a core if not given.
 
@@ -51,21 +71,25 @@ def k_function(
     InputError
         If the survey has fewer than two points.
     UsageError
-        If radii or edge weight are not allowed.
+        If radii, edge weight or intensity are not allowed.
     """
-    measured = SecondOrder.measure(survey, radii, None, edge_weight, workers)
-    return measured.k()
+    return SecondOrder.measure(survey, radii, None, edge_weight, workers, intensity_at_points).k()
 
 
 def l_function(
-    survey: Survey, radii: npt.ArrayLike, edge_weight: str = "isotropic", *, workers: int | None = None
+    survey: Survey,
+    radii: npt.ArrayLike,
+    edge_weight: str = "isotropic",
+    *,
+    intensity_at_points: npt.ArrayLike | None = None,
+    workers: int | None = None,
 ) -> Curve:
     """The L function, the square root of K/pi: under complete randomness L(r) = r.
 
     Besag (1977), discussion of Ripley, Journal of the Royal Statistical Society B 39: 193-195.
     Parameters and errors as for `k_function`; values in metres.
     """
-    return SecondOrder.measure(survey, radii, None, edge_weight, workers).l()
+    return SecondOrder.measure(survey, radii, None, edge_weight, workers, intensity_at_points).l()
 
 
 def pair_correlation(
@@ -74,6 +98,7 @@ def pair_correlation(
     bandwidth: float | None = None,
     edge_weight: str = "isotropic",
     *,
+    intensity_at_points: npt.ArrayLike | None = None,
     workers: int | None = None,
 ) -> Curve:
     """The pair correlation function g: how much denser than chance it is at distance r of a point.
@@ -85,7 +110,7 @@ def pair_correlation(
 
     Parameters
     ----------
-    survey, radii, edge_weight, workers
+    survey, radii, edge_weight, intensity_at_points, workers
         As for `k_function`.
     bandwidth
         Half width of the kernel in metres; 0.15 mean spacings if not given (Stoyan & Stoyan 1994).
@@ -96,7 +121,7 @@ def pair_correlation(
         Values without unit, its bandwidth among its attributes.
     """
     width = default_bandwidth(survey.intensity) if bandwidth is None else bandwidth
-    return SecondOrder.measure(survey, radii, width, edge_weight, workers).g()
+    return SecondOrder.measure(survey, radii, width, edge_weight, workers, intensity_at_points).g()
 
 
 def default_bandwidth(intensity: float) -> float:
@@ -114,15 +139,44 @@ def default_radii(area: StudyArea, count: int = 100) -> Floats:
 
 @dataclass(frozen=True)
 class SecondOrder:
-    """Pair sums of a survey with what is needed to turn them into K, L and g."""
+    """Pair sums of a survey with what is needed to turn them into K, L and g.
+
+    Attributes
+    ----------
+    sums
+        The pair sums.
+    radii
+        (k,) distances in metres.
+    n
+        Number of points.
+    window
+        (k,) part of the study area, in square metres, that can see a neighbour at each
+        distance: |W^(r)| for isotropic weights, the share of directions for translation.
+    area
+        Square metres.
+    edge_weight
+        One of `EDGE_WEIGHTS`.
+    bandwidth
+        Half width of the kernel of g, if g is wanted.
+    pairs
+        What the point factors add up to over all ordered pairs; n(n-1) if all are one.
+    reach
+        (c,) the window at the limits of the pair sums.
+    centres
+        For minus-sampling: (k,) factors of all points deeper than each radius, of
+        those deeper than a radius and the bandwidth, and (1,) of all points.
+    """
 
     sums: PairSums
     radii: Floats
     n: int
-    window: Floats  # (k,) area whose points can have a neighbour at this distance, m²
+    window: Floats
     area: float
     edge_weight: str
     bandwidth: float | None
+    pairs: float
+    reach: Floats | None = None
+    centres: tuple[Floats, Floats, float] | None = None
 
     @classmethod
     def measure(
@@ -132,6 +186,7 @@ class SecondOrder:
         bandwidth: float | None,
         edge_weight: str = "isotropic",
         workers: int | None = None,
+        intensity_at_points: npt.ArrayLike | None = None,
     ) -> SecondOrder:
         """Check the arguments and run over the pairs once."""
         at = checked_radii(radii)
@@ -143,7 +198,10 @@ class SecondOrder:
             raise InputError(
                 f"The survey has {survey.n} point(s); distances between points need at least two."
             )
-        return cls.of_points(survey.local_xy, survey.area, at, bandwidth, edge_weight, workers)
+        factors = None
+        if intensity_at_points is not None:
+            factors = 1.0 / checked_intensity(intensity_at_points, survey.n)
+        return cls.of_points(survey.local_xy, survey.area, at, bandwidth, edge_weight, workers, factors)
 
     @classmethod
     def of_points(
@@ -154,43 +212,79 @@ class SecondOrder:
         bandwidth: float | None,
         edge_weight: str = "isotropic",
         workers: int | None = None,
+        point_weights: Floats | None = None,
     ) -> SecondOrder:
-        """Run over the pairs of checked points in local coordinates."""
+        """Run over the pairs of checked points in local coordinates.
+
+        `point_weights` are the factors of the points, one over the intensity at each.
+        """
         limits = class_limits(radii, bandwidth)
-        sums = pair_sums(local_xy, area, limits, edge_weight=edge_weight, workers=workers)
-        window = (
-            area.reached_areas(radii) if edge_weight == "isotropic" else np.full(len(radii), area.area)
+        reach = _window(area, limits[-1:], edge_weight)
+        varies = bool(reach[0] < area.area * (1 - 1e-12))
+        if varies:
+            # the divisor falls with the distance, and belongs to each pair: classes fine enough
+            limits = np.union1d(limits, np.linspace(0.0, limits[-1], 129)[1:])
+            reach = _window(area, limits, edge_weight)
+        sums = pair_sums(
+            local_xy, area, limits, edge_weight=edge_weight, point_weights=point_weights, workers=workers
         )
-        return cls(sums, radii, len(local_xy), window, area.area, edge_weight, bandwidth)
+        n = len(local_xy)
+        if point_weights is None:
+            pairs = float(n * (n - 1))
+        else:
+            pairs = float(point_weights.sum() ** 2 - (point_weights**2).sum())
+        window = np.interp(radii, limits, reach, left=area.area) if varies else np.full(len(radii), area.area)
+        centres = None
+        if edge_weight == "minus-sampling":
+            x, y = np.ascontiguousarray(local_xy[:, 0]), np.ascontiguousarray(local_xy[:, 1])
+            largest = float(limits[-1])
+            ordered, tail = depth_sums(depths(x, y, area, largest, workers), point_weights)
+            wide = np.minimum(radii + (bandwidth or 0.0), largest)
+            centres = (
+                tail[np.searchsorted(ordered, radii)],
+                tail[np.searchsorted(ordered, wide)],
+                float(tail[0]),
+            )
+        return cls(
+            sums, radii, n, window, area.area, edge_weight, bandwidth, pairs,
+            reach if varies else None, centres,
+        )  # fmt: skip
 
     @property
-    def _scale(self) -> Floats:
-        """|W|² / (n (n-1) |W^(r)|); not a number where no point can have a neighbour."""
-        pairs = self.n * (self.n - 1)
-        reached = np.where(self.window > 0, self.window, np.nan)
-        return np.asarray(self.area**2 / (pairs * reached) if pairs else np.full(len(self.radii), np.nan))
+    def _scale(self) -> float:
+        """Makes K of a sum over pairs: |W| over what their factors add up to, over |W|."""
+        return self.area / self.pairs if self.pairs > 0 else np.nan
+
+    def _divided(self) -> PairSums:
+        """Pair sums, each class over the part of the study area that can see that far."""
+        if self.reach is None:
+            return self.sums
+        seen = self.reach / self.area
+        moments = self.sums.moments / np.where(seen > 0, seen, np.nan)[:, None]
+        # a class that nothing can reach is empty; what lies beyond it cannot be estimated
+        return replace(self.sums, moments=moments)
 
     def k_values(self) -> Floats:
         """(k,) estimate of K in square metres."""
-        positive = self.radii > 0
-        counted = self.sums.up_to(np.where(positive, self.radii, self.sums.edges[0]))
-        if self.edge_weight == "isotropic" and np.any(self.window < self.area * (1 - 1e-12)):
-            # the divisor varies with the distance, so it belongs to each class of pairs
-            share = np.interp(self.sums.edges, self.radii, self.window)
-            weights = self.sums.moments[:, 1] * (self.area**2 / (self.n * (self.n - 1)))
-            summed = np.cumsum(weights / np.where(share > 0, share, np.nan))
-            counted = summed[np.searchsorted(self.sums.edges, np.where(positive, self.radii, 0.0))]
-            return np.asarray(counted)
+        sums = self._divided()
+        counted = sums.up_to(np.where(self.radii > 0, self.radii, sums.edges[0]))
+        if self.centres is not None:
+            deeper, _, every = self.centres
+            return np.asarray(counted * self._scale * every / np.where(deeper > 0, deeper, np.nan))
         return np.asarray(counted * self._scale)
 
     def g_values(self) -> Floats:
         """(k,) estimate of g."""
         assert self.bandwidth is not None
-        sums = self.sums.kernel_sums(self.radii, self.bandwidth)
+        summed = self._divided().kernel_sums(self.radii, self.bandwidth)
         # part of the kernel over positive distances
         z = np.clip(self.radii / self.bandwidth, 0.0, 1.0)
         above = 0.5 + 0.75 * (z - z**3 / 3.0)
-        return np.asarray(sums * self._scale / (2.0 * np.pi * above))
+        values = summed * self._scale / (2.0 * np.pi * above)
+        if self.centres is not None:
+            _, deeper, every = self.centres
+            values = values * np.where(deeper > 0, every, np.nan)
+        return np.asarray(values)
 
     def k(self) -> Curve:
         """K as a curve."""
@@ -215,3 +309,23 @@ def checked_radii(radii: npt.ArrayLike | Sequence[float]) -> Floats:
     if at[-1] <= 0:
         raise not_allowed("radii", "distances of which the last is positive", radii)
     return at
+
+
+def checked_intensity(intensity: npt.ArrayLike, n: int) -> Floats:
+    """One positive intensity a point, or one sentence on what is wrong."""
+    at = np.asarray(intensity, dtype=np.float64)
+    if at.shape != (n,):
+        raise not_allowed("intensity_at_points", f"one value a point ({n})", at.shape)
+    if not np.all(np.isfinite(at)) or np.any(at <= 0):
+        wrong = at[~(np.isfinite(at) & (at > 0))]
+        raise not_allowed("intensity_at_points", "positive and finite", float(wrong[0]))
+    return at
+
+
+def _window(area: StudyArea, radii: Floats, edge_weight: str) -> Floats:
+    """Part of the study area, square metres, whose points can have a neighbour at each distance."""
+    if edge_weight == "isotropic":
+        return area.reached_areas(radii)
+    if edge_weight == "translation":
+        return area.area * met_directions(area, radii)
+    return np.full(len(radii), area.area)
