@@ -29,26 +29,32 @@ ADVICE: dict[str, tuple[str, ...]] = {
     "too-few-points": (
         "Map more ground of the same kind, or add an earlier survey of the same area, until there are some "
         "hundred points; twenty is the least with which an answer is tried.",
-        "Check in the data audit below that no points were dropped by mistake, for instance outside the study area.",
+        "Check in the data audit below that no points were dropped by mistake, for instance outside the "
+        "study area.",
     ),
     "no-clustering": (
         "If you expected clusters, check the data audit below: a study area drawn far wider than the ground "
         "that was searched, or coordinates rounded coarsely, can hide or feign them.",
-        "If the clusters are larger than the distances studied here, a larger study area is needed to see them.",
+        "If the clusters are larger than the distances studied here, a larger study area is needed to see "
+        "them.",
     ),
     "on-bound": (
         "Look at the figure of the contrast: where it is low along a whole edge, the data do not choose.",
-        "More points, or a larger study area, fix the values better. If the density plainly drifts across the "
+        "More points, or a larger study area, fix the values better. If the density plainly drifts across "
+        "the "
         "area, analyse parts of it that are alike.",
     ),
     "sigma-beyond-range": (
         "Survey a larger area, several times as wide as the clusters that you expect.",
-        "If the density drifts across the area, with the terrain for instance, analyse parts of it that are alike.",
+        "If the density drifts across the area, with the terrain for instance, analyse parts of it that are "
+        "alike.",
     ),
     "few-clusters": (
-        "Survey a larger area of the same kind: some tens of clusters are needed to say how large and how dense "
+        "Survey a larger area of the same kind: some tens of clusters are needed to say how large and how "
+        "dense "
         "they are in general.",
-        "Single clusters may well be plain to see on the map of the points; what cannot be told is the rule behind them.",
+        "Single clusters may well be plain to see on the map of the points; what cannot be told is the rule "
+        "behind them.",
     ),
     "flat-valley": (
         "Look at the figure of the contrast: every place in the long valley fits about equally well.",
@@ -117,7 +123,7 @@ def compose(
     caution = ""
     if centres is not None:
         sentences.append(("Where are they?", _where(centres)))
-        sentences.append(("How sure is this?", _sure(centres)))
+        sentences.append(("How sure is this?", _sure(centres) + _unexplained(envelopes, fit)))
         beyond = _unwalked(centres)
         if beyond:
             sentences.append(("What does the part hold that was not walked?", beyond))
@@ -149,9 +155,7 @@ def _headline(fit: ClusterFit, centres: CentreMap | None) -> str:
     return f"About {mean:,.0f} clusters, half of each within {half} m of its centre"
 
 
-def _clustered(
-    survey: Survey, envelopes: Mapping[str, EnvelopeTest] | None, fit: ClusterFit | None
-) -> str:
+def _clustered(survey: Survey, envelopes: Mapping[str, EnvelopeTest] | None, fit: ClusterFit | None) -> str:
     if not envelopes or "L" not in envelopes:
         return ""
     test = envelopes["L"]
@@ -164,14 +168,19 @@ def _clustered(
         if isinstance(own, float) and own <= LEVEL:
             reach = fit.choices["r_max_m"] if fit is not None else 0.0
             return (
-                f"**Yes, at short distances.** Up to {words.number(float(str(reach)), 2)} m, {who.lower()} have more "
-                f"neighbours than chance alone would give them (p = **{words.probability(own)}**); over all distances "
+                f"**Yes, at short distances.** Up to {words.number(float(str(reach)), 2)} m, {who.lower()} "
+                "have more "
+                f"neighbours than chance alone would give them (p = **{words.probability(own)}**); over all "
+                "distances "
                 f"studied the difference is not clear ({how})."
             )
-        return f"**Not beyond chance.** {who} lie as points thrown at random over the study area would ({how})."
+        return (
+            f"**Not beyond chance.** {who} lie as points thrown at random over the study area would ({how})."
+        )
     if lower and not upper:
         return (
-            f"**No, they keep apart.** {who} are spread more evenly than chance alone would place them, most clearly "
+            f"**No, they keep apart.** {who} are spread more evenly than chance alone would place them, most "
+            "clearly "
             f"at distances of {_ranges(lower)} ({how})."
         )
     near = [d for d in envelopes["g"].departures() if d[2] == "above"] if "g" in envelopes else upper
@@ -181,10 +190,8 @@ def _clustered(
 
 
 def _ranges(found: list[tuple[float, float, str]]) -> str:
-    texts = []
-    for low, high, _ in found[:3]:
-        same = words.number(low, 2) == words.number(high, 2)
-        texts.append(f"{words.number(high, 2)} m" if same else f"{words.number(low, 2)} to {words.number(high, 2)} m")
+    """Distances at which a curve leaves its envelope."""
+    texts = [f"{low:.3g} m" if low == high else f"{low:.3g} to {high:.3g} m" for low, high, _ in found[:3]]
     return words.listed(texts)
 
 
@@ -197,9 +204,11 @@ def _size(fit: ClusterFit) -> str:
     of_points = fit.parameters["mean_offspring"]
     count_limits = fit.intervals.get("mean_offspring")
     return (
-        f"Half of a cluster's points lie within **{words.number(half)} m** of its centre{_clause(half_limits, 'm')} and "
+        f"Half of a cluster's points lie within **{words.number(half)} m** of its "
+        f"centre{_clause(half_limits, 'm')} and "
         f"95 % within **{words.number(most)} m**{_clause(most_limits, 'm')}; the spread behind this, "
-        f"{model.scale_name.replace('_', ' ')}, is {words.number(scale)} m{_clause(limits, 'm')}. A cluster holds "
+        f"{model.scale_name.replace('_', ' ')}, is {words.number(scale)} m{_clause(limits, 'm')}. A cluster "
+        "holds "
         f"**{words.number(of_points, 2)}** points on average{_clause(count_limits, '')}."
     )
 
@@ -261,16 +270,50 @@ def _sure(centres: CentreMap) -> str:
     agree = "agree" if centres.converged else "do **not** agree yet"
     none = f", and {words.plural(alone, 'point belongs', 'points belong')} to none" if alone else ""
     return (
-        f"**{sure:,} of {len(member):,}** points belong to their cluster with a probability of {SURE:g} or more{none}. "
-        f"The {chains} independent runs of {draws:,} draws that this rests on {agree} (R̂ {centres.r_hat:.3f}, effective "
+        f"**{sure:,} of {len(member):,}** points belong to their cluster with a probability of {SURE:g} or "
+        f"more{none}. "
+        f"The {chains} independent runs of {draws:,} draws that this rests on {agree} (R̂ "
+        f"{centres.r_hat:.3f}, effective "
         f"sample size {centres.effective_sample_size:,.0f})."
     )
 
 
+def _unexplained(envelopes: Mapping[str, EnvelopeTest] | None, fit: ClusterFit) -> str:
+    """Say where pairs are more frequent than both chance and the fitted clusters make them."""
+    left = more_than_fitted((envelopes or {}).get("g"), fit)
+    if left is None:
+        return ""
+    return (
+        f" Between {left[0]:.3g} and {left[1]:.3g} m points still have more neighbours than the fitted clusters give "
+        "them: clusters lie in groups, or the terrain draws them together, which this model leaves out."
+    )
+
+
+def more_than_fitted(test: EnvelopeTest | None, fit: ClusterFit) -> tuple[float, float] | None:
+    """The first stretch of distances where g leaves its envelope upwards and the fitted model does not.
+
+    Stretches of fewer than three radii do not count.
+    """
+    if test is None or test.curve.upper is None:
+        return None
+    curve, upper = test.curve, test.curve.upper
+    with np.errstate(invalid="ignore"):
+        left = (curve.values > upper) & (fit.model.pair_correlation(curve.radii) < upper)
+    start = 0
+    for k in range(len(left) + 1):
+        if k == len(left) or not left[k]:
+            if k - start >= 3:
+                return float(curve.radii[start]), float(curve.radii[k - 1])
+            start = k + 1
+    return None
+
+
 def _not_converged(centres: CentreMap) -> str:
     return (
-        f"The independent runs behind the map do not agree yet (R̂ {centres.r_hat:.3f}, should be below 1.01; effective "
-        f"sample size {centres.effective_sample_size:,.0f}, should be above 400). Take numbers and places of centres as "
+        f"The independent runs behind the map do not agree yet (R̂ {centres.r_hat:.3f}, should be below "
+        "1.01; effective "
+        f"sample size {centres.effective_sample_size:,.0f}, should be above 400). Take numbers and places of "
+        "centres as "
         "rough; the size of a cluster and the number per hectare come from the fit and do not depend on this."
     )
 
@@ -287,11 +330,14 @@ def _unwalked(centres: CentreMap) -> str:
         others = f" (95 % interval {words.counts_between(row['centres_low'], row['centres_high'])})"
         return (
             f"Its {words.number(hectares)} ha probably hold **{words.whole(points)}** points{some} and "
-            f"**{words.whole(number)}** cluster centres{others}, if the ground there is like the ground that was walked."
+            f"**{words.whole(number)}** cluster centres{others}, if the ground there is like the ground that "
+            "was walked."
         )
     return (
-        f"The {len(parts):,} parts, {words.number(hectares)} ha together, probably hold **{words.whole(points)}** points "
-        f"and **{words.whole(number)}** cluster centres, if the ground there is like the ground that was walked; the "
+        f"The {len(parts):,} parts, {words.number(hectares)} ha together, probably hold "
+        f"**{words.whole(points)}** points "
+        f"and **{words.whole(number)}** cluster centres, if the ground there is like the ground that was "
+        "walked; the "
         "table below gives each with its interval."
     )
 

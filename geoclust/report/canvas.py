@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import base64
 import io
+import re
 from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
@@ -77,7 +78,16 @@ def svg_text(figure: Figure) -> str:
     with look():
         figure.savefig(buffer, format="svg", dpi=_PIXELS_PER_INCH, metadata={"Date": None, "Creator": None})
     text = buffer.getvalue()
-    return text[text.index("<svg") :]
+    return _NUMBERS.sub(_shorter, text[text.index("<svg") :])
+
+
+# coordinates of lines and marks, written to a millionth of a point
+_NUMBERS = re.compile(r' (?:d|x|y)="[^"]*"')
+
+
+def _shorter(attribute: re.Match[str]) -> str:
+    """Coordinates to a hundredth of a point: nobody sees more, and the page stays small."""
+    return re.sub(r"-?\d+\.\d{3,}", lambda n: f"{float(n[0]):.2f}".rstrip("0").rstrip("."), attribute[0])
 
 
 def data_uri(figure: Figure) -> str:

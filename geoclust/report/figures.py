@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from matplotlib.figure import Figure
 from matplotlib.ticker import FuncFormatter, MaxNLocator
+from scipy.interpolate import RectBivariateSpline
 
 from geoclust.report import canvas
 from geoclust.report.canvas import Floats
@@ -17,12 +18,13 @@ if TYPE_CHECKING:
 
     from geoclust.centres.result import CentreMap
     from geoclust.curves.envelopes import EnvelopeTest
+    from geoclust.fitting.contrast import ContrastSurface
     from geoclust.fitting.result import ClusterFit
 
 _SIZE = (5.2, 3.6)
 # contrast in units of its minimum up to which the valley is shaded: there fits are hardly told apart
 VALLEY = 1.25
-_LEVELS = (1.05, VALLEY, 2.0, 4.0, 8.0, 16.0)
+_LEVELS = (VALLEY, 2.0, 4.0, 8.0)
 
 
 def curve_figure(test: EnvelopeTest, *, fit: ClusterFit | None = None) -> Figure:
@@ -49,7 +51,9 @@ def curve_figure(test: EnvelopeTest, *, fit: ClusterFit | None = None) -> Figure
         ax.plot(r, curve.theory - off, color=canvas.INK, lw=0.9, ls=(0, (4, 3)), label="expected at random")
         if fit is not None:
             modelled = {"L": fit.model.l_function, "g": fit.model.pair_correlation, "K": fit.model.k_function}
-            ax.plot(r, modelled[curve.function](r) - off, color=canvas.UNSURE, lw=2.2, label="fitted clusters")
+            ax.plot(
+                r, modelled[curve.function](r) - off, color=canvas.UNSURE, lw=2.2, label="fitted clusters"
+            )
         ax.plot(r, curve.values - off, color=canvas.CLUSTER, lw=1.6, label="survey")
         name = "L(r) − r (m)" if curve.function == "L" else f"{curve.function}(r)"
         ax.set_ylabel(f"{name} (m²)" if curve.function == "K" else name)
@@ -69,36 +73,31 @@ def contrast_figure(fit: ClusterFit) -> Figure | None:
     surface = fit.surface
     if surface is None:
         return None
-    rho = surface.parent_intensities * 1e4
-    ratio = surface.contrast / np.nanmin(surface.contrast)
+    rho, scales, ratio = _fine(surface)
     scale = fit.parameters[surface.scale_name]
     with canvas.look():
         figure, ax = _axes()
-        top = max(float(np.nanmax(ratio)), 2.0)
-        shown = np.minimum(ratio, 32.0)
-        levels = np.geomspace(1.0, min(top, 32.0), 13)
+        top = min(max(float(np.nanmax(ratio)), 2.0), 32.0)
         # dark is low: the valley is the deep part
-        ax.contourf(rho, surface.scales, shown.T, levels=levels, cmap=canvas.RAMP_COLOURS.reversed(), extend="max",
-                    norm="log")  # fmt: skip
+        ax.contourf(rho, scales, np.minimum(ratio, top).T, levels=np.geomspace(1.0, top, 13),
+                    cmap=canvas.RAMP_COLOURS.reversed(), extend="max", norm="log")  # fmt: skip
         lines = [level for level in _LEVELS if level < top]
-        drawn = ax.contour(rho, surface.scales, ratio.T, levels=lines, colors="white", linewidths=0.8)
-        ax.clabel(drawn, fmt=lambda v: f"×{v:g}", fontsize=8)
-        if lines:
-            ax.contour(rho, surface.scales, ratio.T, levels=[lines[min(1, len(lines) - 1)]], colors="white",
-                       linewidths=1.8)  # fmt: skip
+        widths = [2.0 if level == VALLEY else 0.8 for level in lines]
+        drawn = ax.contour(rho, scales, ratio.T, levels=lines, colors="white", linewidths=widths)
+        ax.clabel(drawn, levels=lines[1:], fmt=lambda v: f"× {v:g}", fontsize=8)
         ax.plot(fit.parameters["parent_intensity"] * 1e4, scale, marker="o", ms=8, mfc=canvas.UNSURE, mec="white",
                 mew=1.4, ls="none", label="best fit")  # fmt: skip
         ax.set_xscale("log")
         ax.set_yscale("log")
-        ax.set_xlim(*_window(rho, (ratio < 4.0).any(axis=1)))
-        ax.set_ylim(*_window(surface.scales, (ratio < 4.0).any(axis=0)))
+        ax.set_xlim(rho[0], rho[-1])
+        ax.set_ylim(scales[0], scales[-1])
         for axis in (ax.xaxis, ax.yaxis):
             axis.set_major_formatter(FuncFormatter(lambda v, _: f"{v:g}"))
             axis.set_minor_formatter(FuncFormatter(_one_two_five))
             axis.set_tick_params(which="minor", labelsize=9)
         ax.set_xlabel("cluster centres per hectare (ha⁻¹)")
         ax.set_ylabel(f"{surface.scale_name.replace('_', ' ')} (m)")
-        ax.legend(loc="upper right", labelcolor="white", framealpha=0.0)
+        ax.legend(loc="upper right", frameon=True, framealpha=0.85, edgecolor="none", handletextpad=0.2)
         return figure
 
 
@@ -119,7 +118,7 @@ def number_figure(centres: CentreMap) -> Figure:
         ax.axvline(mean, color=canvas.UNSURE, lw=2, label="mean")
         ax.set_xlabel("number of cluster centres inside the study area")
         ax.set_ylabel("share of the sample (%)")
-        ax.xaxis.set_major_locator(MaxNLocator(integer=True, nbins=8))
+        ax.xaxis.set_major_locator(MaxNLocator(integer=True, nbins=8, steps=[1, 2, 5, 10]))
         ax.set_ylim(0, 1.25 * heights.max())
         ax.legend(loc="upper left", ncols=3, handlelength=1.2, columnspacing=1.2)
         return figure
@@ -137,7 +136,9 @@ def zones_figure(zones: gpd.GeoDataFrame, names: list[str]) -> Figure:
     """
     hectares = zones["area_ha"].to_numpy(dtype=float)
     with np.errstate(invalid="ignore", divide="ignore"):
-        mean, low, high = (zones[f"centres_{k}"].to_numpy(dtype=float) / hectares for k in ("mean", "low", "high"))
+        mean, low, high = (
+            zones[f"centres_{k}"].to_numpy(dtype=float) / hectares for k in ("mean", "low", "high")
+        )
     rows = np.arange(len(zones))[::-1]
     with canvas.look():
         figure, ax = _axes((5.2, 1.0 + 0.36 * max(len(zones), 2)))
@@ -172,12 +173,24 @@ def _span(*curves: Floats) -> tuple[float, float]:
     return low - 0.05 * height, high + 0.12 * height
 
 
+def _fine(surface: ContrastSurface) -> tuple[Floats, Floats, Floats]:
+    """The part of the surface round its valley, interpolated: ha⁻¹ (a,), m (b,), contrast / least (a, b)."""
+    x, y = np.log(surface.parent_intensities * 1e4), np.log(surface.scales)
+    height = np.log(np.maximum(surface.contrast, 1e-300))
+    low = height < height.min() + np.log(4.0)
+    smooth = RectBivariateSpline(x, y, height)
+    across, up = (np.linspace(*_window(v, low.any(axis=k)), 181) for v, k in ((x, 1), (y, 0)))
+    fine = smooth(across, up)
+    # between the nodes a spline may dip below its lowest node: that is the least then
+    least = min(float(fine.min()), float(height.min()))
+    return np.exp(across), np.exp(up), np.exp(fine - least)
+
+
 def _window(values: Floats, low: np.ndarray) -> tuple[float, float]:
-    """The part of a logarithmic axis where the contrast is low, with as much again on either side."""
-    inside = np.log(values[low]) if low.any() else np.log(values)
-    wide = max(inside.max() - inside.min(), np.log(3.0))
-    first, last = inside.min() - 0.5 * wide, inside.max() + 0.5 * wide
-    return float(max(values[0], np.exp(first))), float(min(values[-1], np.exp(last)))
+    """The part of an axis where the contrast is low, with half as much again on either side."""
+    inside = values[low]
+    wide = max(float(inside.max() - inside.min()), 1.0)
+    return max(float(values[0]), inside.min() - 0.4 * wide), min(float(values[-1]), inside.max() + 0.4 * wide)
 
 
 def _one_two_five(value: float, _: int) -> str:

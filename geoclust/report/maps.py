@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 import pyproj
 import shapely
+from matplotlib.colors import to_rgb
 from matplotlib.figure import Figure
 from matplotlib.lines import Line2D
 from matplotlib.patches import PathPatch, Rectangle
@@ -27,11 +28,12 @@ if TYPE_CHECKING:
     from geoclust.centres.result import CentreMap
 
 # inches
-_WIDTH = 7.2
-_MARGINS = {"left": 0.62, "right": 0.12, "top": 0.1, "bottom": 0.5}
-_STRIP = 0.6
+WIDE = 6.7
+NARROW = 5.0
+_MARGINS = {"left": 0.6, "right": 0.1, "top": 0.1, "bottom": 0.48}
+_STRIP = 0.62
 _KEY_STRIP = 0.55
-_TALLEST = 7.0
+_TALLEST_SHAPE = 1.05
 # membership probability from which a point is drawn as surely in its cluster, as in the style of the layer
 SURE = 0.8
 
@@ -42,13 +44,17 @@ class _Sheet:
 
     figure: Figure
     map: Axes
-    metres_per_point: float
+    metres_per_inch: float
     strip: Axes
     ramp: Axes | None
 
 
 def survey_map(
-    survey: Survey, *, zones: gpd.GeoDataFrame | None = None, unsurveyed: gpd.GeoDataFrame | None = None
+    survey: Survey,
+    *,
+    zones: gpd.GeoDataFrame | None = None,
+    unsurveyed: gpd.GeoDataFrame | None = None,
+    width: float = WIDE,
 ) -> Figure:
     """Map of the study area with its holes and the mapped points.
 
@@ -58,9 +64,11 @@ def survey_map(
         Points and study area, metres.
     zones, unsurveyed
         Polygons to draw with it, in the CRS of the survey.
+    width
+        Inches.
     """
     with canvas.look():
-        sheet = _sheet(survey, also=[unsurveyed])
+        sheet = _sheet(survey, width=width, also=[unsurveyed])
         keys = _ground(sheet, survey, zones, unsurveyed)
         keys.insert(0, _draw_points(sheet, survey.xy, facecolor=canvas.CLUSTER, edgecolor="white",
                                     label="mapped points"))  # fmt: skip
@@ -74,8 +82,9 @@ def centre_map(centres: CentreMap, survey: Survey) -> Figure:
     with canvas.look():
         sheet = _sheet(survey, ramp=True)
         _draw_raster(sheet, centres, survey, canvas.ramp_places(centres.mean, breaks))
-        keys = [_draw_points(sheet, survey.xy, facecolor=canvas.INK, edgecolor="white", label="mapped points",
-                             scale=0.6)]  # fmt: skip
+        keys = [
+            _draw_points(sheet, survey.xy, facecolor=canvas.INK, edgecolor="white", label="mapped points")
+        ]
         keys += _ground(sheet, survey, centres.zones, None, fill=None)
         labels = [_ramp_label(value) for value in breaks]
         _draw_ramp(sheet, np.linspace(0.0, 1.0, len(breaks)), labels, "expected cluster centres per hectare")
@@ -83,21 +92,21 @@ def centre_map(centres: CentreMap, survey: Survey) -> Figure:
         return sheet.figure
 
 
-def probability_map(centres: CentreMap, survey: Survey) -> Figure:
+def probability_map(centres: CentreMap, survey: Survey, *, width: float = WIDE) -> Figure:
     """Map of the probability that a cell holds at least one cluster centre."""
-    width, height = centres.grid.cell
+    across, down = centres.grid.cell
     top = float(np.nanmax(centres.probability)) if np.isfinite(centres.probability).any() else 0.0
     ceiling = next(c for c in (0.05, 0.1, 0.2, 0.5, 1.0) if top <= c)
     with canvas.look():
-        sheet = _sheet(survey, ramp=True)
+        sheet = _sheet(survey, width=width, ramp=True)
         _draw_raster(sheet, centres, survey, centres.probability / ceiling)
         keys = _ground(sheet, survey, centres.zones, None, fill=None)
         ticks = np.linspace(0.0, 1.0, 6)
-        size = f"{width:.3g}" if width == height else f"{width:.3g} by {height:.3g}"
+        size = f"{across:.3g}" if across == down else f"{across:.3g} by {down:.3g}"
         unit = "m cells" if centres.grid.crs.is_projected else "cells of the template"
         _draw_ramp(
             sheet, ticks, [f"{t * ceiling:.2g}" for t in ticks],
-            f"probability of at least one centre in the cell ({size} {unit})",
+            f"probability of at least one centre ({size} {unit})",
         )  # fmt: skip
         _finish(sheet, keys)
         return sheet.figure
@@ -111,24 +120,38 @@ def clusters_map(centres: CentreMap, survey: Survey) -> Figure:
     at = clusters[["centre_e_m", "centre_n_m"]].to_numpy(dtype=float)
     with canvas.look():
         sheet = _sheet(survey, beyond=at)
+        dense = len(clusters) > canvas.DENSE_POINTS // 10
         keys = _ground(sheet, survey, None, None)
+        face = (*to_rgb(canvas.CLUSTER), 0.25)
         for outline in clusters.geometry:
             if outline is not None and not outline.is_empty:
-                patch = PathPatch(_path(shapely.get_parts(outline)), facecolor=canvas.CLUSTER, alpha=0.25, lw=0)
+                patch = PathPatch(_path(shapely.get_parts(outline)), fc=face, ec=canvas.CLUSTER, lw=0.7)
+                patch.set_rasterized(dense)
                 sheet.map.add_patch(patch)
-                edge = PathPatch(_path(shapely.get_parts(outline)), fill=False, ec=canvas.CLUSTER, lw=0.7)
-                sheet.map.add_patch(edge)
-        keys.append(Rectangle((0, 0), 1, 1, facecolor="#cbd8dc", edgecolor=canvas.CLUSTER, lw=0.7, label="cluster"))
+        keys.append(
+            Rectangle((0, 0), 1, 1, facecolor=face, edgecolor=canvas.CLUSTER, lw=0.7, label="cluster")
+        )
         groups = [
             (~member, "none", canvas.BACKGROUND, "in no cluster"),
-            (member & ~sure, canvas.UNSURE, canvas.INK, f"in a cluster, probability below {SURE:g}"),
-            (member & sure, canvas.CLUSTER, canvas.INK, f"in a cluster, {SURE:g} or more"),
+            (member & ~sure, canvas.UNSURE, canvas.INK, "perhaps in a cluster"),
+            (member & sure, canvas.CLUSTER, canvas.INK, f"in a cluster (probability {SURE:g} or more)"),
         ]
         for chosen, fill, edge_colour, label in groups:
-            keys.append(_draw_points(sheet, survey.xy[chosen], facecolor=fill, edgecolor=edge_colour, label=label))
-        cross = {"marker": "+", "color": "black", "linestyle": "none", "markersize": 5, "markeredgewidth": 0.9}
-        dense = len(at) > canvas.DENSE_POINTS
-        (drawn,) = sheet.map.plot(at[:, 0], at[:, 1], label="cluster centre", rasterized=dense, **cross)
+            keys.append(
+                _draw_points(
+                    sheet, survey.xy[chosen], facecolor=fill, edgecolor=edge_colour, label=label, of=survey.n
+                )
+            )
+        cross = {
+            "marker": "+",
+            "color": "black",
+            "linestyle": "none",
+            "markersize": 4,
+            "markeredgewidth": 0.7,
+        }
+        (drawn,) = sheet.map.plot(
+            at[:, 0], at[:, 1], label="cluster centre", zorder=3, rasterized=dense, **cross
+        )
         _finish(sheet, [*keys, drawn])
         return sheet.figure
 
@@ -136,6 +159,7 @@ def clusters_map(centres: CentreMap, survey: Survey) -> Figure:
 def _sheet(
     survey: Survey,
     *,
+    width: float = WIDE,
     ramp: bool = False,
     also: list[gpd.GeoDataFrame | None] | None = None,
     beyond: Floats | None = None,
@@ -150,28 +174,28 @@ def _sheet(
     pad = 0.02 * max(east - west, north - south)
     west, south, east, north = west - pad, south - pad, east + pad, north + pad
 
-    wide = _WIDTH - _MARGINS["left"] - _MARGINS["right"]
-    high = wide * (north - south) / (east - west)
-    if high > _TALLEST:
-        wide, high = wide * _TALLEST / high, _TALLEST
+    room = width - _MARGINS["left"] - _MARGINS["right"]
+    shape = (north - south) / (east - west)
+    wide = room * min(1.0, _TALLEST_SHAPE / shape)
+    high = wide * shape
     low = _STRIP + (_KEY_STRIP if ramp else 0.0) + _MARGINS["bottom"]
     full = low + high + _MARGINS["top"]
-    figure = Figure(figsize=(_WIDTH, full), facecolor="white")
-    left = _MARGINS["left"] + 0.5 * (_WIDTH - _MARGINS["left"] - _MARGINS["right"] - wide)
-    box = figure.add_axes((left / _WIDTH, low / full, wide / _WIDTH, high / full))
+    figure = Figure(figsize=(width, full), facecolor="white")
+    left = _MARGINS["left"] + 0.5 * (room - wide)
+    box = figure.add_axes((left / width, low / full, wide / width, high / full))
     box.set_xlim(west, east)
     box.set_ylim(south, north)
     box.set_aspect("equal", adjustable="box")
     _metric_axes(box, max(east - west, north - south))
     margin = _MARGINS["left"]
-    across = (_WIDTH - margin - _MARGINS["right"]) / _WIDTH
-    strip = figure.add_axes((margin / _WIDTH, 0.0, across, _STRIP / full))
+    across = room / width
+    strip = figure.add_axes((margin / width, 0.0, across, _STRIP / full))
     strip.set_axis_off()
-    strip.set_xlim(0, across * _WIDTH)
+    strip.set_xlim(0, room)
     strip.set_ylim(0, _STRIP)
     key = None
     if ramp:
-        key = figure.add_axes((margin / _WIDTH, (_STRIP + 0.24) / full, across, 0.13 / full))
+        key = figure.add_axes((margin / width, (_STRIP + 0.24) / full, across, 0.13 / full))
     return _Sheet(figure, box, (east - west) / wide, strip, key)
 
 
@@ -187,7 +211,7 @@ def _metric_axes(ax: Axes, extent: float) -> None:
         label.set_verticalalignment("center")
     ax.set_xlabel(f"easting ({unit})", labelpad=2)
     ax.set_ylabel(f"northing ({unit})", labelpad=2)
-    ax.tick_params(direction="out", length=3, labelsize=8.5)
+    ax.tick_params(direction="out", length=3, labelsize=9)
     for side in ax.spines.values():
         side.set_visible(True)
         side.set_linewidth(0.6)
@@ -216,21 +240,23 @@ def _ground(
             sheet.map.add_patch(PathPatch(_path(shapely.get_parts(shape)), zorder=0.8, **style))
         keys.append(Rectangle((0, 0), 1, 1, label="not walked", **style))
     if zones is not None and len(zones):
-        for shape in zones.geometry:
-            edge = PathPatch(_path(shapely.get_parts(shape)), fill=False, ec=canvas.INK, lw=0.8, ls=(0, (5, 3)))
-            edge.set_zorder(1.5)
-            sheet.map.add_patch(edge)
+        # edges that two zones share are drawn once, or their dashes would fill each other's gaps
+        lines = shapely.line_merge(shapely.union_all(shapely.boundary(zones.geometry.to_numpy())))
+        for line in shapely.get_parts(lines):
+            at = shapely.get_coordinates(line)
+            sheet.map.plot(at[:, 0], at[:, 1], color=canvas.INK, lw=0.8, ls=(0, (5, 3)), zorder=1.5)
         keys.append(Line2D([], [], color=canvas.INK, lw=0.8, ls=(0, (5, 3)), label="zone"))
     return keys
 
 
 def _draw_points(
-    sheet: _Sheet, xy: Floats, *, facecolor: str, edgecolor: str, label: str, scale: float = 1.0
+    sheet: _Sheet, xy: Floats, *, facecolor: str, edgecolor: str, label: str, of: int | None = None
 ) -> Artist:
     """Points sized so that they stay apart where they can; returns the entry of the key."""
-    size = scale * float(np.clip(75.0 / np.sqrt(max(len(xy), 1)), 1.6, 4.6))
+    width = float(sheet.figure.get_size_inches()[0])
+    size = width / WIDE * float(np.clip(75.0 / np.sqrt(max(of or len(xy), 1)), 1.4, 5.0))
     look = {"marker": "o", "linestyle": "none", "markerfacecolor": facecolor, "markeredgecolor": edgecolor}
-    edge_width = 0.6 if edgecolor != "white" else 0.35
+    edge_width = min(0.6, 0.18 * size)
     dense = len(xy) > canvas.DENSE_POINTS
     sheet.map.plot(xy[:, 0], xy[:, 1], markersize=size, markeredgewidth=edge_width, zorder=2.5,
                    rasterized=dense, **look)  # fmt: skip
@@ -256,7 +282,10 @@ def _draw_raster(sheet: _Sheet, centres: CentreMap, survey: Survey, places: Floa
 
 
 def _seen_from(
-    here: pyproj.CRS, limits: tuple[tuple[float, float], tuple[float, float]], centres: CentreMap, places: Floats
+    here: pyproj.CRS,
+    limits: tuple[tuple[float, float], tuple[float, float]],
+    centres: CentreMap,
+    places: Floats,
 ) -> Floats:
     """Values of a raster in another CRS at the pixels of the map."""
     (west, east), (south, north) = limits
@@ -277,8 +306,8 @@ def _draw_ramp(sheet: _Sheet, places: Floats, labels: list[str], title: str) -> 
     ax.imshow(np.linspace(0, 1, 256)[None, :], cmap=canvas.RAMP_COLOURS, extent=(0, 1, 0, 1), aspect="auto")
     ax.set_yticks([])
     ax.set_xticks(places if len(labels) > 1 else [1.0], labels)
-    ax.tick_params(axis="x", length=2.5, labelsize=8.5, pad=1.5)
-    ax.set_title(title, fontsize=9, loc="left", pad=3)
+    ax.tick_params(axis="x", length=2.5, labelsize=9, pad=1.5)
+    ax.set_title(title, fontsize=9.5, loc="left", pad=3)
     for side in ax.spines.values():
         side.set_visible(True)
         side.set_linewidth(0.5)
@@ -291,21 +320,23 @@ def _ramp_label(value: float) -> str:
 def _finish(sheet: _Sheet, keys: list[Artist]) -> None:
     """Scale bar, north arrow and key into the strip below the map."""
     across = sheet.strip.get_xlim()[1]
-    length = nice_length(sheet.metres_per_point * 0.24 * across)
-    inches = length / sheet.metres_per_point
+    length = nice_length(sheet.metres_per_inch * min(0.24 * across, 1.5))
+    inches = length / sheet.metres_per_inch
     left, base, bar = 0.02, 0.3, 0.07
     for k, fill in enumerate((canvas.INK, "white")):
         half = Rectangle((left + k * inches / 2, base), inches / 2, bar, fc=fill, ec=canvas.INK, lw=0.7)
         sheet.strip.add_patch(half)
     for k, text in ((0.0, "0"), (0.5, _distance(length / 2, length)), (1.0, _distance(length, length, True))):
-        sheet.strip.text(left + k * inches, base - 0.05, text, ha="center" if k else "left", va="top", fontsize=8.5)
+        sheet.strip.text(
+            left + k * inches, base - 0.05, text, ha="center" if k else "left", va="top", fontsize=9
+        )
     arrow = left + inches + 0.42
     sheet.strip.annotate("", xy=(arrow, 0.52), xytext=(arrow, 0.12),
                          arrowprops={"arrowstyle": "-|>", "color": canvas.INK, "lw": 1.2})  # fmt: skip
     sheet.strip.text(arrow + 0.08, 0.26, "N", ha="left", va="center", fontsize=10, fontweight="bold")
     sheet.strip.legend(
-        handles=keys, loc="center right", bbox_to_anchor=(1.0, 0.5), ncols=3 if len(keys) > 3 else 2,
-        handletextpad=0.5, columnspacing=1.2, borderaxespad=0.0, fontsize=8.5,
+        handles=keys, loc="center right", bbox_to_anchor=(1.0, 0.5), ncols=1 if len(keys) < 3 else 2,
+        handletextpad=0.5, columnspacing=1.2, borderaxespad=0.0, fontsize=9,
     )  # fmt: skip
 
 
@@ -341,5 +372,3 @@ def _path(polygons: np.ndarray | list[shapely.Polygon]) -> Outline:
     if not vertices:
         return Outline(np.empty((0, 2)))
     return Outline(np.concatenate(vertices), np.concatenate(codes))
-
-

@@ -21,9 +21,12 @@ class Step:
 
 _CURVES = Step(
     "Curves",
-    "Pairs of points are counted by distance; each pair is weighted by the inverse of the share of the circle round "
-    "its first point, through its second, that lies in the study area, computed exactly for the drawn boundary with "
-    "its holes and parts. The bandwidth c of the kernel of g is 0.15 mean spacings unless it was set; the squared "
+    "Pairs of points are counted by distance; each pair is weighted by the inverse of the share of the "
+    "circle round "
+    "its first point, through its second, that lies in the study area, computed exactly for the drawn "
+    "boundary with "
+    "its holes and parts. The bandwidth c of the kernel of g is 0.15 mean spacings unless it was set; the "
+    "squared "
     "intensity is estimated by n(n − 1)/|W|².",
     (
         "K(r) = |W|² / (n(n − 1) |W⁽ʳ⁾|) · Σ 1(d ≤ r) / share(x, d)",
@@ -34,39 +37,48 @@ _CURVES = Step(
 )
 _TEST = Step(
     "Test of complete randomness",
-    "Random patterns with the same number of points are drawn in the same study area; curves are ordered by extreme "
-    "rank length, which gives one p-value over all distances and an envelope that a random pattern leaves with a "
+    "Random patterns with the same number of points are drawn in the same study area; curves are ordered by "
+    "extreme "
+    "rank length, which gives one p-value over all distances and an envelope that a random pattern leaves "
+    "with a "
     "probability of 5 % only.",
     (),
     "Myllymäki et al. 2017",
 )
 _CONTRAST = Step(
     "Fit",
-    "The parameters are those whose curve is nearest to the survey's, by minimum contrast with several starts. The "
-    "intervals come from a parametric bootstrap: patterns are drawn from the fit in the same study area and fitted "
+    "The parameters are those whose curve is nearest to the survey's, by minimum contrast with several "
+    "starts. The "
+    "intervals come from a parametric bootstrap: patterns are drawn from the fit in the same study area and "
+    "fitted "
     "again, choice of the range included; the middle 95 % of the new values are the interval.",
     ("D(θ) = ∫ |T̂(r)^q − T(r; θ)^q|² dr",),
     "Diggle & Gratton 1984",
 )
 _CENTRES = Step(
     "Centres",
-    "Given the fitted parameters, configurations of centres inside the study area and round it are sampled in "
-    "proportion to their posterior probability by births, deaths, moves, splits and merges. The expected share of each "
-    "cluster that falls into the study area is exact. Averages over the sample give the maps and the numbers; their "
+    "Given the fitted parameters, configurations of centres inside the study area and round it are sampled "
+    "in "
+    "proportion to their posterior probability by births, deaths, moves, splits and merges. The expected "
+    "share of each "
+    "cluster that falls into the study area is exact. Averages over the sample give the maps and the "
+    "numbers; their "
     "intervals do not hold the uncertainty of the parameters themselves.",
     ("C ~ Poisson(ρ) on W widened;  X | C ~ Poisson(μ Σ k(x − c)) on W",),
     "van Lieshout & Baddeley 2002; Møller & Waagepetersen 2004; Geyer & Møller 1994; Green 1995",
 )
 _CLUSTERS = Step(
     "Clusters",
-    "Of all ways to divide the points into clusters the one with the least expected loss is shown: the fewest pairs "
+    "Of all ways to divide the points into clusters the one with the least expected loss is shown: the "
+    "fewest pairs "
     "wrongly joined or separated, on average over the sample.",
     (),
     "Binder 1978; Dahl 2006",
 )
 _AGREE = Step(
     "Agreement of the runs",
-    "Several runs start far apart; they count as agreeing when the rank-normalised R̂ is below 1.01 and the effective "
+    "Several runs start far apart; they count as agreeing when the rank-normalised R̂ is below 1.01 and the "
+    "effective "
     "sample size above 400.",
     (),
     "Vehtari et al. 2021",
@@ -76,13 +88,15 @@ _FITS = {"minimum-contrast": _CONTRAST}
 
 _MODELS: dict[str, tuple[str, tuple[str, ...]]] = {
     "thomas": (
-        "Centres lie at random, ρ per unit area; each has a Poisson number of points with mean μ, scattered round it as "
+        "Centres lie at random, ρ per unit area; each has a Poisson number of points with mean μ, scattered "
+        "round it as "
         "a Gaussian with standard deviation σ per axis.",
         ("g(r) = 1 + exp(−r²/4σ²) / (4πσ²ρ)", "K(r) = πr² + (1 − exp(−r²/4σ²)) / ρ", "λ = ρμ"),
     ),
 }
 _ANY_MODEL = (
-    "Centres lie at random, ρ per unit area; each has a Poisson number of points with mean μ. The distance between two "
+    "Centres lie at random, ρ per unit area; each has a Poisson number of points with mean μ. The distance "
+    "between two "
     "points of a cluster has density h and distribution H.",
     ("g(r) = 1 + h(r)/ρ", "K(r) = πr² + H(r)/ρ", "λ = ρμ"),
 )
@@ -104,28 +118,35 @@ def steps(fit: ClusterFit | None, located: bool) -> list[Step]:
 REFERENCES: tuple[str, ...] = (
     "Besag J (1977) Discussion of Ripley. Journal of the Royal Statistical Society B 39: 193–195",
     "Binder DA (1978) Bayesian cluster analysis. Biometrika 65: 31–38",
-    "Dahl DB (2006) Model-based clustering for expression data via a Dirichlet process mixture model. In: Bayesian "
+    "Dahl DB (2006) Model-based clustering for expression data via a Dirichlet process mixture model. In: "
+    "Bayesian "
     "inference for gene expression and proteomics. Cambridge University Press",
     "Diggle PJ (1983) Statistical analysis of spatial point patterns. Academic Press",
-    "Diggle PJ, Gratton RJ (1984) Monte Carlo methods of inference for implicit statistical models. Journal of the "
+    "Diggle PJ, Gratton RJ (1984) Monte Carlo methods of inference for implicit statistical models. Journal "
+    "of the "
     "Royal Statistical Society B 46: 193–227",
     "Geyer CJ, Møller J (1994) Simulation procedures and likelihood inference for spatial point processes. "
     "Scandinavian Journal of Statistics 21: 359–373",
     "Green PJ (1995) Reversible jump Markov chain Monte Carlo computation and Bayesian model determination. "
     "Biometrika 82: 711–732",
-    "Guan Y (2007) A least-squares cross-validation bandwidth selection approach in pair correlation function "
+    "Guan Y (2007) A least-squares cross-validation bandwidth selection approach in pair correlation "
+    "function "
     "estimations. Statistics and Probability Letters 77: 1722–1729",
-    "Møller J, Waagepetersen RP (2004) Statistical inference and simulation for spatial point processes. Chapman & Hall",
-    "Myllymäki M, Mrkvička T, Grabarnik P, Seijo H, Hahn U (2017) Global envelope tests for spatial processes. Journal "
+    "Møller J, Waagepetersen RP (2004) Statistical inference and simulation for spatial point processes. "
+    "Chapman & Hall",
+    "Myllymäki M, Mrkvička T, Grabarnik P, Seijo H, Hahn U (2017) Global envelope tests for spatial "
+    "processes. Journal "
     "of the Royal Statistical Society B 79: 381–404",
     "Ohser J (1983) On estimators for the reduced second moment measure of point processes. Mathematische "
     "Operationsforschung und Statistik, Series Statistics 14: 63–71",
     "Ripley BD (1977) Modelling spatial patterns. Journal of the Royal Statistical Society B 39: 172–212",
     "Stoyan D, Stoyan H (1994) Fractals, random shapes and point fields. Wiley",
     "Thomas M (1949) A generalization of Poisson's binomial limit for use in ecology. Biometrika 36: 18–25",
-    "van Lieshout MNM, Baddeley AJ (2002) Extrapolating and interpolating spatial patterns. In: Spatial cluster "
+    "van Lieshout MNM, Baddeley AJ (2002) Extrapolating and interpolating spatial patterns. In: Spatial "
+    "cluster "
     "modelling. Chapman & Hall",
-    "Vehtari A, Gelman A, Simpson D, Carpenter B, Bürkner P-C (2021) Rank-normalization, folding, and localization: an "
+    "Vehtari A, Gelman A, Simpson D, Carpenter B, Bürkner P-C (2021) Rank-normalization, folding, and "
+    "localization: an "
     "improved R̂ for assessing convergence of MCMC. Bayesian Analysis 16: 667–718",
 )
 

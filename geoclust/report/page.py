@@ -136,6 +136,7 @@ def _environment() -> Environment:
         lstrip_blocks=True,
     )
     environment.filters["strong"] = strong
+    environment.filters["raised"] = raised
     return environment
 
 
@@ -148,7 +149,19 @@ def strong(text: str) -> Markup:
     '<strong>5</strong> &lt; 6'
     """
     # safe: escaped before the only mark-up is put in
-    return Markup(re.sub(r"\*\*(.+?)\*\*", r"<strong>\1</strong>", str(escape(text))))
+    kept = re.sub(r"(?<=\d) (?=(?:%|m\b|ha\b))", "\u00a0", str(escape(text)))
+    return Markup(re.sub(r"\*\*(.+?)\*\*", r"<strong>\1</strong>", kept))
+
+
+def raised(text: str) -> Markup:
+    """Escape a formula and set what follows a circumflex high.
+
+    Examples
+    --------
+    >>> str(raised("r^q < 1"))
+    'r<sup>q</sup> &lt; 1'
+    """
+    return Markup(re.sub(r"\^(\w)", r"<sup>\1</sup>", str(escape(text))))
 
 
 def _facts(survey: Survey, audit: Audit | None) -> list[str]:
@@ -175,32 +188,37 @@ def _maps(pictures: _Pictures, survey: Survey, centres: CentreMap | None) -> lis
             pictures.take(
                 maps.centre_map(centres, survey),
                 f"Map of expected cluster centres per hectare; about {mean:.0f} centres in all.",
-                "Where the centres are: the darker a cell, the more cluster centres per hectare are expected in it; on "
+                "Where the centres are: the darker a cell, the more cluster centres per hectare are expected "
+                "in it; on "
                 "pale ground there is hardly one.",
             )
         )
+        found.append(
+            pictures.take(
+                maps.clusters_map(centres, survey),
+                f"Map of {len(centres.clusters):,} outlined clusters with their centres and points.",
+                "Which points belong together: each shape is one cluster, a cross its centre; golden points "
+                "might as "
+                "well belong to a neighbouring one, hollow ones to none.",
+            )
+        )
     shown = {} if centres is None else {"zones": centres.zones, "unsurveyed": centres.unsurveyed}
+    width = maps.WIDE if centres is None else maps.NARROW
     found.append(
         pictures.take(
-            maps.survey_map(survey, **shown),
+            maps.survey_map(survey, width=width, **shown),
             f"Map of the study area with {survey.n:,} mapped points.",
-            "The survey: every dot is a mapped point; white ground inside the outline was not part of the study area.",
+            "The survey: every dot is a mapped point; white ground inside the outline was not part of the "
+            "study area.",
         )
     )
     if centres is not None:
         found.append(
             pictures.take(
-                maps.clusters_map(centres, survey),
-                f"Map of {len(centres.clusters):,} outlined clusters with their centres and points.",
-                "Which points belong together: each shape is one cluster, a cross its centre; golden points might as "
-                "well belong to a neighbouring one, hollow ones to none.",
-            )
-        )
-        found.append(
-            pictures.take(
-                maps.probability_map(centres, survey),
+                maps.probability_map(centres, survey, width=width),
                 "Map of the probability that a cell holds at least one cluster centre.",
-                "How likely a centre is: the probability that the cell holds at least one cluster centre, which depends "
+                "How likely a centre is: the probability that the cell holds at least one cluster centre, "
+                "which depends "
                 "on the size of the cells.",
             )
         )
@@ -216,15 +234,20 @@ def _charts(
 ) -> list[Picture]:
     found = []
     readings = {
-        "L": "Neighbours within a distance: where the line of the survey runs above the grey band, points have more "
+        "L": "Neighbours within a distance: where the line of the survey runs above the grey band, points "
+        "have more "
         "neighbours within that distance than chance gives.",
-        "g": "Pairs at a distance: 2 means that pairs at this distance are twice as frequent as by chance; where the "
+        "g": "Pairs at a distance: 2 means that pairs at this distance are twice as frequent as by chance; "
+        "where the "
         "line falls back to the band, clusters end.",
     }
     for name, test in (envelopes or {}).items():
         if name in readings:
             modelled = "; the golden line is the fitted model" if ok else ""
-            reading = readings[name].rstrip(".") + f"{modelled} ({test.curve.interval})."
+            reading = (
+                readings[name].rstrip(".")
+                + f"{modelled} ({test.level * 100:g} % of random patterns stay inside the band everywhere)."
+            )
             alt = f"Curve {name} of the survey with the envelope of complete randomness, p = {test.p_value:.3g}."
             found.append(pictures.take(figures.curve_figure(test, fit=fit if ok else None), alt, reading))
     if fit is not None:
@@ -235,8 +258,10 @@ def _charts(
                 pictures.take(
                     surface,
                     "Contour plot of the contrast over cluster centres per hectare and size of a cluster.",
-                    f"How well the data fix the fit: {best}, and any other place inside the bold line fits nearly as "
-                    "well (contrast up to 1.25 times the least), so a long dark valley means that they cannot be told "
+                    f"How well the data fix the fit: {best}, and any other place inside the bold line fits "
+                    "nearly as "
+                    "well (contrast up to 1.25 times the least), so a long dark valley means that they "
+                    "cannot be told "
                     "apart.",
                 )
             )
@@ -245,8 +270,10 @@ def _charts(
         found.append(
             pictures.take(
                 figures.number_figure(centres),
-                f"Histogram of the number of centres inside: mean {mean:.1f}, 95 % interval {low:.0f} to {high:.0f}.",
-                "How many centres: the higher a bar, the more probable is that number of cluster centres in the study "
+                f"Histogram of the number of centres inside: mean {mean:.1f}, 95 % interval {low:.0f} to "
+                f"{high:.0f}.",
+                "How many centres: the higher a bar, the more probable is that number of cluster centres in "
+                "the study "
                 "area, if the parameters are as fitted.",
             )
         )
@@ -254,8 +281,10 @@ def _charts(
             found.append(
                 pictures.take(
                     figures.zones_figure(centres.zones, tables.zone_names(centres.zones)),
-                    "Cluster centres per hectare in each zone with 95 % intervals; the table has the numbers.",
-                    "Zones compared: the dot is the expected number of cluster centres per hectare of the zone, the "
+                    "Cluster centres per hectare in each zone with 95 % intervals; the table has the "
+                    "numbers.",
+                    "Zones compared: the dot is the expected number of cluster centres per hectare of the "
+                    "zone, the "
                     "line its 95 % interval; zones whose lines overlap widely may not differ.",
                 )
             )
@@ -272,7 +301,7 @@ def _diagnostics(
 ) -> list[tuple[str, str]]:
     rows: list[tuple[str, str]] = []
     for name, test in (envelopes or {}).items():
-        away = [f"{words.number(a)} to {words.number(b)} m ({side})" for a, b, side in test.departures()]
+        away = [f"{a:.3g} to {b:.3g} m ({side})" for a, b, side in test.departures()]
         rows.append(
             (f"complete randomness by {name}", f"p = {words.probability(test.p_value)}; outside the envelope: "
              f"{words.listed(away) if away else 'nowhere'}")
@@ -287,7 +316,11 @@ def _diagnostics(
             ("effective sample size (should be above 400)", f"{centres.effective_sample_size:,.0f}"),
             ("runs agree", "yes" if centres.converged else "no"),
             ("centres looked for outside the study area, up to", f"{words.number(centres.margin)} m"),
-            ("cells of the raster", f"{centres.grid.cell[0]:g} by {centres.grid.cell[1]:g}, units of its CRS"),
+            (
+                "cells of the raster",
+                f"{centres.grid.cell[0]:g} by {centres.grid.cell[1]:g} "
+                f"{centres.grid.crs.axis_info[0].unit_name if centres.grid.crs.axis_info else 'units'}",
+            ),
         ]
     return rows
 
@@ -301,4 +334,3 @@ def _audit_groups(audit: Audit | None) -> list[tuple[str, list[str]]]:
         else:
             groups.append((line, []))
     return groups
-

@@ -41,7 +41,9 @@ def parameter_table(fit: ClusterFit, survey: Survey, centres: CentreMap | None) 
         symbol = f" {SYMBOLS[p.name]}" if p.name in SYMBOLS else ""
         meaning = p.meaning.replace("per unit area", "per hectare") if p.per_area else p.meaning
         name = p.name.replace("_", " ") + ("" if symbol.strip() == p.name else symbol)
-        rows.append((name, words.number(factor * fit.parameters[p.name]), _limits(limits, factor), unit, meaning))
+        rows.append(
+            (name, words.number(factor * fit.parameters[p.name]), _limits(limits, factor), unit, meaning)
+        )
     for share, text in ((0.5, "half"), (0.95, "95 %")):
         radius, limits = radius_holding(fit, share)
         meaning = f"distance from the centre within which {text} of a cluster's points lie"
@@ -87,7 +89,7 @@ def zone_table(zones: gpd.GeoDataFrame, heading: str) -> Table:
             (name, words.number(row["area_ha"]), *points, words.whole(row["centres_mean"]),
              words.counts_between(row["centres_low"], row["centres_high"]), words.number(density, 2))
         )  # fmt: skip
-    header = (heading, "area (ha)", *counted, "cluster centres", "95 % interval", "centres per ha (ha⁻¹)")
+    header = (heading, "area (ha)", *counted, "cluster centres", "95 % interval", "centres per hectare")
     return Table(header, rows, frozenset(range(1, len(header))))
 
 
@@ -116,7 +118,11 @@ def choice_rows(choices: Mapping[str, object]) -> list[tuple[str, str]]:
             rows += [(f"{_CHOICE_NAMES.get(key, _spoken(key))}: {_spoken(str(k))}", _shown(v, str(k)))
                      for k, v in value.items()]  # fmt: skip
             continue
-        name = "largest distance fitted" if key == "r_max_m" and "exponent" in choices else _CHOICE_NAMES.get(key)
+        name = (
+            "largest distance fitted"
+            if key == "r_max_m" and "exponent" in choices
+            else _CHOICE_NAMES.get(key)
+        )
         rows.append((name or _spoken(key), _shown(value, key)))
     return rows
 
@@ -203,7 +209,9 @@ CONTENTS: tuple[tuple[str, tuple[tuple[str, str], ...]], ...] = (
 )  # fmt: skip
 
 
-def contents(files: Sequence[tuple[str, str]], unused: Sequence[str]) -> list[tuple[str, tuple[tuple[str, str], ...]]]:
+def contents(
+    files: Sequence[tuple[str, str]], unused: Sequence[str]
+) -> list[tuple[str, tuple[tuple[str, str], ...]]]:
     """What the layers, bands and columns of the files at hand are.
 
     Parameters
@@ -224,6 +232,10 @@ def digest_rows(audit: Any) -> list[tuple[str, str, str]]:
     """Role, file and SHA-256 of each input."""
     pairs = (("points", audit.points_source), ("study area", audit.area_source))
     return [
-        (role, source.file + (f", layer {source.layer}" if source.layer is not None else ""), source.sha256 or "none")
+        (
+            role,
+            source.file + (f", layer {source.layer}" if source.layer is not None else ""),
+            source.sha256 or "none",
+        )
         for role, source in pairs
     ]
