@@ -11,6 +11,8 @@ from geoclust.centres.result import CentreMap
 from geoclust.curves.curve import Curve
 from geoclust.curves.envelopes import global_envelope, randomness_envelopes
 from geoclust.curves.nearest import empty_space_function, j_function, nearest_neighbour_function
+from geoclust.curves.quadrats import dispersion, quadrat_test
+from geoclust.curves.randomness import clark_evans_test, loosmore_ford_test
 from geoclust.curves.second_order import k_function, l_function, pair_correlation
 from geoclust.errors import CannotTell, GeoclustError, InputError, OutputError, UsageError
 from geoclust.fitting.fit import fit_clusters
@@ -36,6 +38,8 @@ __all__ = [
     "__version__",
     "analyse",
     "audit_survey",
+    "clark_evans_test",
+    "dispersion",
     "empty_space_function",
     "fit_clusters",
     "global_envelope",
@@ -43,8 +47,10 @@ __all__ = [
     "k_function",
     "l_function",
     "locate_centres",
+    "loosmore_ford_test",
     "nearest_neighbour_function",
     "pair_correlation",
+    "quadrat_test",
     "randomness_envelopes",
     "read_survey",
     "simulate_patterns",

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
@@ -10,12 +9,10 @@ import numpy.typing as npt
 
 from geoclust.area.survey import Survey
 from geoclust.curves.curve import Curve
-from geoclust.curves.second_order import SecondOrder, checked_radii, default_bandwidth
-from geoclust.errors import InputError, not_allowed
-from geoclust.workers import in_order
+from geoclust.curves.simulated import Drawn, Progress, Summaries, simulated_curves, uniform_draw
+from geoclust.errors import not_allowed
 
 Floats = npt.NDArray[np.float64]
-Progress = Callable[[str, int, int], None]
 
 ALTERNATIVES = ("different", "clustered", "regular")
 
@@ -68,8 +65,8 @@ def extreme_rank_lengths(curves: Floats, alternative: str = "different") -> npt.
     Each curve is ranked at every radius, from the extreme side or sides; curves
     are then compared by their sorted ranks, the smallest first (Myllymäki et al.
     2017, Journal of the Royal Statistical Society B 79: 381-404). Tied values
-    share the rank of the least extreme of them, and tied curves their position,
-    which keeps a test from rejecting too often.
+    share the mean of their ranks, as published, and curves whose ranks are all
+    the same share their position.
 
     Parameters
     ----------
@@ -92,8 +89,11 @@ def extreme_rank_lengths(curves: Floats, alternative: str = "different") -> npt.
     ordered = np.sort(usable, axis=0)
     ranks = np.empty(usable.shape, dtype=np.int64)
     for k in range(usable.shape[1]):
-        up = s - np.searchsorted(ordered[:, k], usable[:, k], side="left")
-        down = np.searchsorted(ordered[:, k], usable[:, k], side="right")
+        # twice the mean rank of the values tied with each, so that ranks stay whole
+        below = np.searchsorted(ordered[:, k], usable[:, k], side="left")
+        up_to = np.searchsorted(ordered[:, k], usable[:, k], side="right")
+        down = below + up_to + 1
+        up = 2 * (s + 1) - down
         ranks[:, k] = {"clustered": up, "regular": down, "different": np.minimum(up, down)}[alternative]
     ranks.sort(axis=1)
     order = np.lexsort(ranks.T[::-1])
@@ -135,10 +135,11 @@ def global_envelope(
         raise not_allowed("simulations", f"at least {least} for a level of {level:g}", s)
     curves = np.vstack([observed.values, simulated])
     position = extreme_rank_lengths(curves, alternative)
-    # curves at least as extreme as each
-    p = np.array([(position <= position[0]).mean()])[0]
-    inner = position >= int(np.floor((1 - level) * (s + 1) + 1e-9))
-    kept = curves[inner] if inner.any() else curves
+    p = (position <= position[0]).mean()
+    # the hull of all curves but the most extreme ones; tied curves stay or go together, so that
+    # a curve is left out exactly if its p-value does not exceed 1 - level
+    allowed = position[position <= int(np.floor((1 - level) * (s + 1) + 1e-9))]
+    kept = curves[position >= allowed.max()]
     lower, upper = kept.min(axis=0), kept.max(axis=0)
     if alternative == "clustered":
         lower = np.full_like(lower, -np.inf)
@@ -192,27 +193,15 @@ def randomness_envelopes(
     dict
         `EnvelopeTest` under the keys ``L`` and ``g``.
     """
-    at = checked_radii(radii)
     if simulations < 1:
         raise not_allowed("simulations", "a positive whole number", simulations)
-    if survey.n < 2:
-        raise InputError(f"The survey has {survey.n} point(s); distances between points need at least two.")
-    width = default_bandwidth(survey.intensity) if bandwidth is None else bandwidth
-    observed = SecondOrder.measure(survey, at, width, edge_weight, workers)
-    area = survey.area
-
-    def one(seed: np.random.Generator) -> tuple[Floats, Floats]:
-        points = area.local_uniform_points(survey.n, seed)
-        drawn = SecondOrder.of_points(points, area, at, width, edge_weight, workers=1)
-        return drawn.l().values, drawn.g_values()
-
-    seeds = np.random.default_rng(rng).spawn(simulations)
-    l_curves, g_curves = np.empty((simulations, len(at))), np.empty((simulations, len(at)))
-    for k, (l_values, g_values) in enumerate(in_order(one, seeds, workers)):
-        l_curves[k], g_curves[k] = l_values, g_values
-        if progress is not None:
-            progress("complete randomness", k + 1, simulations)
+    summaries = Summaries.of_survey(survey, ("L", "g"), radii, bandwidth=bandwidth, edge_weight=edge_weight)
+    observed = summaries.curves(Drawn(survey.local_xy), workers)
+    found = simulated_curves(
+        summaries, uniform_draw(survey.area, survey.n), np.random.default_rng(rng).spawn(simulations),
+        workers=workers, progress=progress, label="complete randomness",
+    )  # fmt: skip
     return {
-        "L": global_envelope(observed.l(), l_curves, level=level, alternative=alternative),
-        "g": global_envelope(observed.g(), g_curves, level=level, alternative=alternative),
+        name: global_envelope(curve, found[name], level=level, alternative=alternative)
+        for name, curve in observed.items()
     }
