@@ -7,6 +7,7 @@ Diggle & Gratton (1984), Journal of the Royal Statistical Society B 46:
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 import numpy.typing as npt
@@ -22,6 +23,10 @@ FUNCTIONS = ("g", "K")
 EXPONENTS = {"K": 0.25, "g": 0.5}
 # nodes of the contrast surface in parent intensity and scale
 SURFACE = (61, 61)
+# smallest scale searched, as a part of the bandwidth of g
+NARROWEST = 50.0
+# nodes of the integral over the kernel of g, crowded towards its lower end
+SMOOTHING_NODES = 40
 
 
 @dataclass(frozen=True, eq=False)
@@ -73,12 +78,29 @@ class ContrastFit:
 
 @dataclass(frozen=True, eq=False)
 class Contrast:
-    """What is compared: a curve, the power, the weight of each radius."""
+    """What is compared: a curve, the power, the weight of each radius.
+
+    Attributes
+    ----------
+    function
+        ``g`` or ``K``.
+    radii
+        (k,) metres, increasing.
+    values
+        (k,) the survey's curve; not a number where it is not known.
+    exponent
+        Power of the curve.
+    bandwidth
+        Half width of the kernel that g was estimated with, metres. The model's g
+        is smoothed with the same kernel before the two are compared: clusters
+        narrower than the kernel are blurred by it in the survey's curve as well.
+    """
 
     function: str
     radii: Floats
     values: Floats
     exponent: float
+    bandwidth: float | None = None
 
     @property
     def _target(self) -> Floats:
@@ -88,6 +110,7 @@ class Contrast:
     def _root_weights(self) -> Floats:
         """Square root of the trapezoid weights, none where the curve is not known."""
         steps = np.gradient(self.radii)
+        steps[[0, -1]] *= 0.5
         return np.where(np.isfinite(self.values), np.sqrt(steps), 0.0)
 
     def residuals(self, curve: Floats) -> Floats:
@@ -96,14 +119,36 @@ class Contrast:
         return np.asarray(self._root_weights * (np.maximum(curve, 0.0) ** self.exponent - target))
 
     def curve_of(self, model: ClusterModel) -> Floats:
-        """The model's curve at the radii."""
-        return model.pair_correlation(self.radii) if self.function == "g" else model.k_function(self.radii)
+        """The model's curve at the radii, as the survey's is expected to come out."""
+        base, excess = self.excess_of(model)
+        return np.asarray(base + excess / model.parent_intensity)
 
     def excess_of(self, model: ClusterModel) -> tuple[Floats, Floats]:
         """Curve of randomness and the model's excess over it, to be divided by the parent intensity."""
-        if self.function == "g":
+        if self.function == "K":
+            return np.pi * self.radii**2, model.sibling_distribution(self.radii)
+        if self.bandwidth is None:
             return np.ones_like(self.radii), model.sibling_density(self.radii)
-        return np.pi * self.radii**2, model.sibling_distribution(self.radii)
+        distances, weights = self._kernel
+        return np.ones_like(self.radii), np.sum(model.sibling_density(distances) * weights, axis=1)
+
+    @cached_property
+    def _kernel(self) -> tuple[Floats, Floats]:
+        """(k, nodes) distances and weights of the Epanechnikov kernel over its part above zero.
+
+        With every pair divided by its own distance, the expected estimate of g is
+        g smoothed by just this kernel.
+        """
+        assert self.bandwidth is not None
+        node, weight = np.polynomial.legendre.leggauss(SMOOTHING_NODES)
+        t = 0.5 * (1.0 + node)
+        low = np.maximum(self.radii - self.bandwidth, 0.0)[:, None]
+        width = (self.radii + self.bandwidth)[:, None] - low
+        # squares crowd the nodes at the lower end, where the density of siblings is steepest
+        distances = low + width * t**2
+        z = (distances - self.radii[:, None]) / self.bandwidth
+        weights = weight * t * width * np.maximum(1.0 - z * z, 0.0)
+        return distances, weights / weights.sum(axis=1, keepdims=True)
 
 
 def fit_contrast(
@@ -131,7 +176,9 @@ def fit_contrast(
     """
     scale_name = kind.scale_name
     # from a tenth of a centre in the study area to ten centres a point
-    low = np.log([0.1 / area, max(contrast.radii[0], contrast.radii[-1] / 200.0)])
+    # clusters much narrower than the kernel of g, or than the first radius of K, all look the same
+    narrowest = contrast.radii[0] / 4.0 if contrast.bandwidth is None else contrast.bandwidth / NARROWEST
+    low = np.log([0.1 / area, narrowest])
     high = np.log([10.0 * intensity, 2.0 * contrast.radii[-1]])
 
     def model_at(theta: Floats) -> ClusterModel:

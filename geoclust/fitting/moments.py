@@ -40,7 +40,7 @@ class ContrastChoices:
     r_max
         Largest distance in metres; found from a first fit if None.
     r_min
-        Smallest distance in metres; the bandwidth for g, zero for K if None.
+        Smallest distance in metres; half the bandwidth for g, zero for K if None.
     exponent
         Power of the curve; ½ for g and ¼ for K if None.
     bandwidth
@@ -82,12 +82,17 @@ def fit_points(
 ) -> MomentFit:
     """Fit a model to points in local coordinates; the range follows the clusters unless it is set."""
     widest = 0.25 * float(np.sqrt(area.area))
+    r_min = choices.r_min or 0.0
+    if choices.r_max is not None and choices.r_max > area.diameter:
+        raise not_allowed("r_max", f"at most the width of the study area, {area.diameter:.4g} m", choices.r_max)
+    if choices.r_max is None and r_min > 0.5 * widest:
+        raise not_allowed("r_min", f"at most {0.5 * widest:.4g} m here, unless r_max is given too", r_min)
     r_max = choices.r_max if choices.r_max is not None else widest
     found = _fit_range(kind, local_xy, area, choices, r_max, workers)
     if choices.r_max is None:
         shorter = RANGE_IN_SCALES[choices.function] * found.fit.model.scale
         if shorter < 0.8 * widest:
-            r_max = max(shorter, 4.0 * found.bandwidth)
+            r_max = max(shorter, 4.0 * found.bandwidth, 2.0 * r_min)
             found = _fit_range(kind, local_xy, area, choices, r_max, workers)
     return found
 
@@ -102,15 +107,17 @@ def _fit_range(
 ) -> MomentFit:
     intensity = len(local_xy) / area.area
     width = choices.bandwidth if choices.bandwidth is not None else default_bandwidth(intensity)
-    r_min = choices.r_min if choices.r_min is not None else (width if choices.function == "g" else 0.0)
-    r_min = min(r_min, 0.5 * r_max)
+    if choices.r_min is not None:
+        r_min = choices.r_min
+    else:
+        r_min = min(0.5 * width, 0.5 * r_max) if choices.function == "g" else 0.0
     radii = np.linspace(r_min, r_max, NODES + 1)
     radii = radii[1:] if radii[0] == 0 else radii
     g = choices.function == "g"
     measured = SecondOrder.of_points(local_xy, area, radii, width if g else None, workers=workers)
     values = measured.g_values() if g else measured.k_values()
     exponent = choices.exponent if choices.exponent is not None else EXPONENTS[choices.function]
-    contrast = Contrast(choices.function, radii, values, exponent)
+    contrast = Contrast(choices.function, radii, values, exponent, width if g else None)
     return MomentFit(fit_contrast(kind, contrast, intensity, area.area), contrast, width, r_max)
 
 
