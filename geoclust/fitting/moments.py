@@ -84,7 +84,9 @@ def fit_points(
     widest = 0.25 * float(np.sqrt(area.area))
     r_min = choices.r_min or 0.0
     if choices.r_max is not None and choices.r_max > area.diameter:
-        raise not_allowed("r_max", f"at most the width of the study area, {area.diameter:.4g} m", choices.r_max)
+        raise not_allowed(
+            "r_max", f"at most the width of the study area, {area.diameter:.4g} m", choices.r_max
+        )
     if choices.r_max is None and r_min > 0.5 * widest:
         raise not_allowed("r_min", f"at most {0.5 * widest:.4g} m here, unless r_max is given too", r_min)
     r_max = choices.r_max if choices.r_max is not None else widest
