@@ -4,24 +4,62 @@ Coordinates are (n, 2) arrays, easting then northing, in metres; intensities are
 per square metre; every random function takes `rng`, a generator or a seed.
 """
 
-from geoclust.area.study_area import StudyArea
-from geoclust.area.survey import Survey
-from geoclust.centres.locate import locate_centres
-from geoclust.centres.result import CentreMap
-from geoclust.curves.curve import Curve
-from geoclust.curves.envelopes import global_envelope, randomness_envelopes
-from geoclust.curves.nearest import empty_space_function, j_function, nearest_neighbour_function
-from geoclust.curves.quadrats import dispersion, quadrat_test
-from geoclust.curves.randomness import clark_evans_test, loosmore_ford_test
-from geoclust.curves.second_order import k_function, l_function, pair_correlation
-from geoclust.errors import CannotTell, GeoclustError, InputError, OutputError, UsageError
-from geoclust.fitting.fit import fit_clusters
-from geoclust.fitting.result import ClusterFit
-from geoclust.layers.survey_layers import audit_survey
-from geoclust.models.thomas import Thomas
-from geoclust.simulation.patterns import simulate_patterns
+from importlib import import_module
+from typing import TYPE_CHECKING, Any
+
 from geoclust.version import __version__
-from geoclust.workflow import analyse, read_survey
+
+if TYPE_CHECKING:
+    from geoclust.area.study_area import StudyArea
+    from geoclust.area.survey import Survey
+    from geoclust.centres.locate import locate_centres
+    from geoclust.centres.result import CentreMap
+    from geoclust.curves.curve import Curve
+    from geoclust.curves.envelopes import global_envelope, randomness_envelopes
+    from geoclust.curves.nearest import empty_space_function, j_function, nearest_neighbour_function
+    from geoclust.curves.quadrats import dispersion, quadrat_test
+    from geoclust.curves.randomness import clark_evans_test, loosmore_ford_test
+    from geoclust.curves.second_order import k_function, l_function, pair_correlation
+    from geoclust.errors import CannotTell, GeoclustError, InputError, OutputError, UsageError
+    from geoclust.fitting.fit import fit_clusters
+    from geoclust.fitting.result import ClusterFit
+    from geoclust.layers.survey_layers import audit_survey
+    from geoclust.models.thomas import Thomas
+    from geoclust.simulation.patterns import simulate_patterns
+    from geoclust.workflow import analyse, read_survey
+
+# loaded when they are first used: `geoclust --help` need not wait for compilers and geometry
+_HOMES = {
+    "StudyArea": "geoclust.area.study_area",
+    "Survey": "geoclust.area.survey",
+    "locate_centres": "geoclust.centres.locate",
+    "CentreMap": "geoclust.centres.result",
+    "Curve": "geoclust.curves.curve",
+    "global_envelope": "geoclust.curves.envelopes",
+    "randomness_envelopes": "geoclust.curves.envelopes",
+    "empty_space_function": "geoclust.curves.nearest",
+    "j_function": "geoclust.curves.nearest",
+    "nearest_neighbour_function": "geoclust.curves.nearest",
+    "dispersion": "geoclust.curves.quadrats",
+    "quadrat_test": "geoclust.curves.quadrats",
+    "clark_evans_test": "geoclust.curves.randomness",
+    "loosmore_ford_test": "geoclust.curves.randomness",
+    "k_function": "geoclust.curves.second_order",
+    "l_function": "geoclust.curves.second_order",
+    "pair_correlation": "geoclust.curves.second_order",
+    "CannotTell": "geoclust.errors",
+    "GeoclustError": "geoclust.errors",
+    "InputError": "geoclust.errors",
+    "OutputError": "geoclust.errors",
+    "UsageError": "geoclust.errors",
+    "fit_clusters": "geoclust.fitting.fit",
+    "ClusterFit": "geoclust.fitting.result",
+    "audit_survey": "geoclust.layers.survey_layers",
+    "Thomas": "geoclust.models.thomas",
+    "simulate_patterns": "geoclust.simulation.patterns",
+    "analyse": "geoclust.workflow",
+    "read_survey": "geoclust.workflow",
+}
 
 __all__ = [
     "CannotTell",
@@ -55,3 +93,15 @@ __all__ = [
     "read_survey",
     "simulate_patterns",
 ]
+
+
+def __getattr__(name: str) -> Any:
+    if name not in _HOMES:
+        raise AttributeError(f"module 'geoclust' has no attribute {name!r}")
+    value = getattr(import_module(_HOMES[name]), name)
+    globals()[name] = value
+    return value
+
+
+def __dir__() -> list[str]:
+    return sorted({*globals(), *_HOMES})

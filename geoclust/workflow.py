@@ -31,6 +31,7 @@ from geoclust.layers.survey_layers import PathLike, read_polygons, read_survey_l
 from geoclust.models.catalogue import model_by_name
 from geoclust.report.page import write_page
 from geoclust.report.record import fit_record, library_versions, write_record
+from geoclust.seeds import stream
 from geoclust.simulation.patterns import simulate_patterns
 
 Progress = Callable[[str, int, int], None]
@@ -159,7 +160,9 @@ class Analysis:
 
 
 @dataclass(frozen=True)
-class _Extras:
+class Extras:
+    """What was given beside the survey: zones, parts not walked, a template grid, and warnings about them."""
+
     zones: gpd.GeoDataFrame | None
     unsurveyed: gpd.GeoDataFrame | None
     grid: Grid | None
@@ -244,7 +247,7 @@ def analyse(
             points, area, points_layer=points_layer, area_layer=area_layer, crs=crs, x_column=x_column,
             y_column=y_column, metric_crs=metric_crs, repair=repair,
         )  # fmt: skip
-        extras = _read_extras(survey, zones, zones_layer, unsurveyed, unsurveyed_layer, like, crs, repair)
+        extras = read_extras(survey, zones, zones_layer, unsurveyed, unsurveyed_layer, like, crs, repair)
         found = _analyse_survey(
             survey, extras, model=model, cell=cell, seed=used_seed, simulations=simulations,
             workers=workers, progress=progress, out=Path(out),
@@ -257,7 +260,7 @@ def _title(points: PathLike) -> str:
     return Path(str(points)).stem.replace("_", " ")
 
 
-def _read_extras(
+def read_extras(
     survey: Survey,
     zones: PathLike | None,
     zones_layer: str | None,
@@ -266,7 +269,8 @@ def _read_extras(
     like: PathLike | None,
     crs: object | None,
     repair: bool,
-) -> _Extras:
+) -> Extras:
+    """Read what was given beside the survey, in its metric system."""
     warnings: list[str] = []
 
     def polygons(path: PathLike | None, layer: str | None) -> gpd.GeoDataFrame | None:
@@ -276,7 +280,7 @@ def _read_extras(
         warnings.extend(found.attrs.get("warnings", []))
         return found
 
-    return _Extras(
+    return Extras(
         polygons(zones, zones_layer),
         polygons(unsurveyed, unsurveyed_layer),
         None if like is None else grid_like(str(like)),
@@ -286,7 +290,7 @@ def _read_extras(
 
 def _analyse_survey(
     survey: Survey,
-    extras: _Extras,
+    extras: Extras,
     *,
     model: str,
     cell: float | None,
@@ -296,7 +300,7 @@ def _analyse_survey(
     progress: Progress | None,
     out: Path,
 ) -> Analysis:
-    envelope_seed, fit_seed, centre_seed = np.random.default_rng(seed).spawn(3)
+    envelope_seed, fit_seed, centre_seed = (stream(seed, step) for step in ("curves", "fit", "centres"))
     envelopes: dict[str, EnvelopeTest] = {}
     fit: ClusterFit | None = None
     centres: CentreMap | None = None
@@ -346,7 +350,7 @@ def curve_table(
 def _write_all(
     folder: Path,
     found: Analysis,
-    extras: _Extras,
+    extras: Extras,
     command: str | None,
     title: str,
     workers: int | None,
@@ -363,8 +367,8 @@ def _write_all(
     except OSError as error:
         raise OutputError(f"curves.csv could not be written: {error.strerror}.") from error
     package = folder / "results.gpkg"
-    renamed = _write_package(package, found, extras)
-    pattern_seed = np.random.default_rng(found.seed).spawn(4)[3]
+    renamed = write_layers(package, found, extras)
+    pattern_seed = stream(found.seed, "patterns")
     with PatternWriter(
         package, "simulated_points", survey.area.crs, layer_crs=survey.points_crs, into_package=True
     ) as sink:
@@ -398,7 +402,8 @@ def _write_all(
     )
 
 
-def _write_package(path: Path, found: Analysis, extras: _Extras) -> dict[str, dict[str, str]]:
+def write_layers(path: Path, found: Analysis, extras: Extras) -> dict[str, dict[str, str]]:
+    """Write results.gpkg, in the system of the input points; returns the columns renamed, by layer."""
     survey, centres = found.survey, found.centres
     crs = survey.points_crs
     attributes = survey.attributes

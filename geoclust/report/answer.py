@@ -159,7 +159,8 @@ def _clustered(survey: Survey, envelopes: Mapping[str, EnvelopeTest] | None, fit
     if not envelopes or "L" not in envelopes:
         return ""
     test = envelopes["L"]
-    how = f"p = **{words.probability(test.p_value)}**, {test.simulations:,} random patterns in the same study area"
+    drawn = f"{test.simulations:,} random patterns in the same study area"
+    how = f"p = **{words.probability(test.p_value)}**, {drawn}"
     upper = [d for d in test.departures() if d[2] == "above"]
     lower = [d for d in test.departures() if d[2] == "below"]
     who = f"The {survey.n:,} points"
@@ -284,7 +285,8 @@ def _unexplained(envelopes: Mapping[str, EnvelopeTest] | None, fit: ClusterFit) 
     if left is None:
         return ""
     return (
-        f" Between {left[0]:.3g} and {left[1]:.3g} m points still have more neighbours than the fitted clusters give "
+        f" Between {left[0]:.3g} and {left[1]:.3g} m points still have more neighbours than the fitted "
+        "clusters give "
         "them: clusters lie in groups, or the terrain draws them together, which this model leaves out."
     )
 

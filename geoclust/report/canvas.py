@@ -5,10 +5,10 @@ from __future__ import annotations
 import base64
 import io
 import re
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import matplotlib as mpl
 import numpy as np
@@ -16,7 +16,7 @@ import numpy.typing as npt
 from matplotlib.colors import LinearSegmentedColormap
 
 from geoclust.errors import OutputError, not_allowed
-from geoclust.layers.results_folder import results_file
+from geoclust.layers.results_folder import results_folder
 from geoclust.layers.styles import RAMP
 
 if TYPE_CHECKING:
@@ -42,7 +42,7 @@ _PIXELS_PER_INCH = 200
 
 RAMP_COLOURS = LinearSegmentedColormap.from_list("geoclust", RAMP)
 
-_LOOK = {
+_LOOK: Any = {
     "font.family": "sans-serif",
     "font.size": 10,
     "axes.edgecolor": INK,
@@ -96,28 +96,38 @@ def data_uri(figure: Figure) -> str:
     return f"data:image/svg+xml;base64,{encoded}"
 
 
-def save_figure(figure: Figure, path: str | Path, overwrite: bool = False) -> None:
-    """Write a figure to a file of its own, by suffix.
+def save_figures(figures: Mapping[str, Figure], folder: str | Path, overwrite: bool = False) -> None:
+    """Write figures into a folder of their own, which appears whole.
+
+    Parameters
+    ----------
+    figures
+        Figure by file name; the suffix says which format.
+    folder
+        Folder to make.
+    overwrite
+        Whether such figures that it holds already may be replaced.
 
     Raises
     ------
     UsageError
-        If the suffix is none of .svg, .png, .pdf.
+        If a suffix is none of .svg, .png, .pdf.
     OutputError
-        If the file exists or cannot be written.
+        If the folder holds other files or cannot be written.
     """
-    kind = Path(path).suffix.lower()
-    if kind not in FIGURE_SUFFIXES:
-        raise not_allowed("the suffix of a figure", FIGURE_SUFFIXES, kind)
-    with results_file(path, overwrite) as partial:
-        try:
-            if kind == ".svg":
-                partial.write_text(svg_text(figure), encoding="utf-8")
-            else:
-                with look():
-                    figure.savefig(partial, dpi=_PIXELS_PER_INCH)
-        except OSError as error:
-            raise OutputError(f"{path} cannot be written: {error.strerror}.") from error
+    for name in figures:
+        if Path(name).suffix not in FIGURE_SUFFIXES:
+            raise not_allowed("the suffix of a figure", FIGURE_SUFFIXES, name)
+    with results_folder(folder, overwrite, known_files=tuple(figures)) as partial:
+        for name, figure in figures.items():
+            try:
+                if Path(name).suffix == ".svg":
+                    (partial / name).write_text(svg_text(figure), encoding="utf-8")
+                else:
+                    with look():
+                        figure.savefig(partial / name, dpi=_PIXELS_PER_INCH)
+            except OSError as error:
+                raise OutputError(f"{folder}/{name} cannot be written: {error.strerror}.") from error
 
 
 def ramp_places(values: npt.ArrayLike, breaks: Floats) -> Floats:

@@ -85,8 +85,8 @@ def contrast_figure(fit: ClusterFit) -> Figure | None:
         widths = [2.0 if level == VALLEY else 0.8 for level in lines]
         drawn = ax.contour(rho, scales, ratio.T, levels=lines, colors="white", linewidths=widths)
         ax.clabel(drawn, levels=lines[1:], fmt=lambda v: f"× {v:g}", fontsize=8)
-        ax.plot(fit.parameters["parent_intensity"] * 1e4, scale, marker="o", ms=8, mfc=canvas.UNSURE, mec="white",
-                mew=1.4, ls="none", label="best fit")  # fmt: skip
+        ax.plot(fit.parameters["parent_intensity"] * 1e4, scale, marker="o", ms=8, mfc=canvas.UNSURE,
+                mec="white",                mew=1.4, ls="none", label="best fit")  # fmt: skip
         ax.set_xscale("log")
         ax.set_yscale("log")
         ax.set_xlim(rho[0], rho[-1])

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import pyproj
@@ -142,7 +142,7 @@ def clusters_map(centres: CentreMap, survey: Survey) -> Figure:
                     sheet, survey.xy[chosen], facecolor=fill, edgecolor=edge_colour, label=label, of=survey.n
                 )
             )
-        cross = {
+        cross: dict[str, Any] = {
             "marker": "+",
             "color": "black",
             "linestyle": "none",
@@ -228,14 +228,19 @@ def _ground(
     """Study area, zones and parts not walked; returns what the key says about them."""
     polygon = survey.area.polygon
     path = _path(shapely.get_parts(polygon))
-    dense = len(path.vertices) > canvas.DENSE_VERTICES
+    dense = len(np.asarray(path.vertices)) > canvas.DENSE_VERTICES
     if fill is not None:
         sheet.map.add_patch(PathPatch(path, facecolor=fill, lw=0, zorder=0.5, rasterized=dense))
     edge = PathPatch(path, fill=False, edgecolor=canvas.INK, lw=1.1, zorder=1.6, rasterized=dense)
     sheet.map.add_patch(edge)
     keys: list[Artist] = [Line2D([], [], color=canvas.INK, lw=1.1, label="study area")]
     if unsurveyed is not None and len(unsurveyed):
-        style = {"facecolor": "none", "edgecolor": canvas.BACKGROUND, "hatch": "////", "lw": 0.8}
+        style: dict[str, Any] = {
+            "facecolor": "none",
+            "edgecolor": canvas.BACKGROUND,
+            "hatch": "////",
+            "lw": 0.8,
+        }
         for shape in unsurveyed.geometry:
             sheet.map.add_patch(PathPatch(_path(shapely.get_parts(shape)), zorder=0.8, **style))
         keys.append(Rectangle((0, 0), 1, 1, label="not walked", **style))
@@ -255,7 +260,12 @@ def _draw_points(
     """Points sized so that they stay apart where they can; returns the entry of the key."""
     width = float(sheet.figure.get_size_inches()[0])
     size = width / WIDE * float(np.clip(75.0 / np.sqrt(max(of or len(xy), 1)), 1.4, 5.0))
-    look = {"marker": "o", "linestyle": "none", "markerfacecolor": facecolor, "markeredgecolor": edgecolor}
+    look: dict[str, Any] = {
+        "marker": "o",
+        "linestyle": "none",
+        "markerfacecolor": facecolor,
+        "markeredgecolor": edgecolor,
+    }
     edge_width = min(0.6, 0.18 * size)
     dense = len(xy) > canvas.DENSE_POINTS
     sheet.map.plot(xy[:, 0], xy[:, 1], markersize=size, markeredgewidth=edge_width, zorder=2.5,
@@ -326,9 +336,13 @@ def _finish(sheet: _Sheet, keys: list[Artist]) -> None:
     for k, fill in enumerate((canvas.INK, "white")):
         half = Rectangle((left + k * inches / 2, base), inches / 2, bar, fc=fill, ec=canvas.INK, lw=0.7)
         sheet.strip.add_patch(half)
-    for k, text in ((0.0, "0"), (0.5, _distance(length / 2, length)), (1.0, _distance(length, length, True))):
+    for part, text in (
+        (0.0, "0"),
+        (0.5, _distance(length / 2, length)),
+        (1.0, _distance(length, length, True)),
+    ):
         sheet.strip.text(
-            left + k * inches, base - 0.05, text, ha="center" if k else "left", va="top", fontsize=9
+            left + part * inches, base - 0.05, text, ha="center" if part else "left", va="top", fontsize=9
         )
     arrow = left + inches + 0.42
     sheet.strip.annotate("", xy=(arrow, 0.52), xytext=(arrow, 0.12),

@@ -248,7 +248,7 @@ def _charts(
                 readings[name].rstrip(".")
                 + f"{modelled} ({test.level * 100:g} % of random patterns stay inside the band everywhere)."
             )
-            alt = f"Curve {name} of the survey with the envelope of complete randomness, p = {test.p_value:.3g}."
+            alt = f"Curve {name} with its envelope of complete randomness, p = {test.p_value:.3g}."
             found.append(pictures.take(figures.curve_figure(test, fit=fit if ok else None), alt, reading))
     if fit is not None:
         surface = figures.contrast_figure(fit)
@@ -303,7 +303,8 @@ def _diagnostics(
     for name, test in (envelopes or {}).items():
         away = [f"{a:.3g} to {b:.3g} m ({side})" for a, b, side in test.departures()]
         rows.append(
-            (f"complete randomness by {name}", f"p = {words.probability(test.p_value)}; outside the envelope: "
+            (f"complete randomness by {name}", f"p = {words.probability(test.p_value)}; outside the "
+                                               "envelope: "
              f"{words.listed(away) if away else 'nowhere'}")
         )  # fmt: skip
     if fit is not None:

@@ -115,7 +115,7 @@ def fit_record(
             out["inputs"].append(
                 {"role": role, "file": source.file, "layer": source.layer, "sha256": source.sha256}
             )
-    return _plain(out)
+    return plain(out)
 
 
 def write_record(path: str | Path, record: Mapping[str, Any]) -> None:
@@ -126,12 +126,12 @@ def write_record(path: str | Path, record: Mapping[str, Any]) -> None:
         raise OutputError(f"{path} could not be written: {error.strerror}.") from error
 
 
-def _plain(value: Any) -> Any:
+def plain(value: Any) -> Any:
     """The same value in types that JSON knows; numbers that are not finite become null."""
     if isinstance(value, Mapping):
-        return {str(k): _plain(v) for k, v in value.items()}
+        return {str(k): plain(v) for k, v in value.items()}
     if isinstance(value, list | tuple | np.ndarray):
-        return [_plain(v) for v in value]
+        return [plain(v) for v in value]
     if isinstance(value, bool | np.bool_):
         return bool(value)
     if isinstance(value, int | np.integer):

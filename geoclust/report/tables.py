@@ -34,7 +34,7 @@ class Table:
 
 def parameter_table(fit: ClusterFit, survey: Survey, centres: CentreMap | None) -> Table:
     """Parameters in the units that people use, with 95 % intervals and what follows from them."""
-    rows = []
+    rows: list[tuple[str, ...]] = []
     for p in fit.model.described:
         factor, unit = (words.HECTARE, "ha⁻¹") if p.per_area else (1.0, _UNITS.get(p.unit, p.unit))
         limits = fit.intervals.get(p.name)
@@ -62,6 +62,20 @@ def _limits(limits: tuple[float, float] | None, factor: float = 1.0) -> str:
     return "none" if limits is None else words.between(factor * limits[0], factor * limits[1])
 
 
+def text_lines(fit: ClusterFit, survey: Survey) -> list[str]:
+    """The table of parameters as aligned lines of text."""
+    table = parameter_table(fit, survey, None)
+    rows = [table.header, *table.rows]
+    widths = [max(len(row[k]) for row in rows) for k in range(len(table.header))]
+    return [
+        "  ".join(
+            cell.rjust(width) if k in table.numeric else cell.ljust(width)
+            for k, (cell, width) in enumerate(zip(row, widths, strict=True))
+        ).rstrip()
+        for row in rows
+    ]
+
+
 def zone_names(zones: gpd.GeoDataFrame) -> list[str]:
     """A name for every polygon: the first column of text that tells them apart, or their number."""
     for column in zones.columns:
@@ -80,8 +94,8 @@ def zone_table(zones: gpd.GeoDataFrame, heading: str) -> Table:
     rows = []
     for name, (_, row) in zip(zone_names(zones), zones.iterrows(), strict=True):
         if predicted:
-            points: tuple[str, ...] = (words.whole(row["points_mean"]),
-                                       words.counts_between(row["points_low"], row["points_high"]))  # fmt: skip
+            some = words.counts_between(row["points_low"], row["points_high"])
+            points: tuple[str, ...] = (words.whole(row["points_mean"]), some)
         else:
             points = (f"{int(row['points']):,}",) if "points" in zones else ("",)
         density = row["centres_mean"] / row["area_ha"] if row["area_ha"] > 0 else float("nan")
@@ -178,9 +192,11 @@ CONTENTS: tuple[tuple[str, tuple[tuple[str, str], ...]], ...] = (
     (
         "results.gpkg, layers zones and unsurveyed",
         (
-            ("area_ha", "area that counts: inside the study area for zones, outside it for parts not walked, ha"),
+            ("area_ha", "area that counts: inside the study area for zones, outside it for parts not "
+                        "walked, ha"),
             ("points", "points mapped there (zones)"),
-            ("points_mean, points_low, points_high", "points probably there, with 95 % interval (parts not walked)"),
+            ("points_mean, points_low, points_high", "points probably there, with 95 % interval (parts not "
+                                                     "walked)"),
             ("centres_mean, centres_low, centres_high", "cluster centres there, with 95 % interval"),
         ),
     ),
@@ -191,7 +207,8 @@ CONTENTS: tuple[tuple[str, tuple[tuple[str, str], ...]], ...] = (
     (
         "centre_intensity.tif, bands",
         (
-            ("centres_per_ha_mean", "expected cluster centres per hectare, of the part of the cell inside the study area"),
+            ("centres_per_ha_mean", "expected cluster centres per hectare, of the part of the cell inside "
+                                    "the study area"),
             ("centres_per_ha_sd", "its standard deviation, ha⁻¹"),
             ("probability_any_centre", "probability of at least one centre in that part"),
         ),

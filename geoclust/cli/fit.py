@@ -1,0 +1,76 @@
+"""`geoclust fit`: size and number of clusters, with intervals."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Any
+
+import click
+
+from geoclust.cli.options import READING, RUNNING, out_option, survey_arguments, takes
+from geoclust.cli.output import as_json, put
+from geoclust.cli.seeds import chosen_seed
+from geoclust.cli.talk import Talk
+from geoclust.errors import CannotTell
+
+
+@click.command(short_help="Fit a cluster model: how large, how many, how sure.")
+@survey_arguments
+@takes(*READING, "model", "function", "r_min", "r_max", "exponent", "bandwidth", "bootstrap", "json")
+@out_option("Write the fit as JSON to this file, for --fit of locate and simulate.")
+@takes("seed", "overwrite", *RUNNING)
+def fit(
+    points: Path,
+    area: Path,
+    model: str,
+    json: bool,
+    out: Path | None,
+    seed: int | None,
+    overwrite: bool,
+    workers: int | None,
+    quiet: bool,
+    function: str,
+    r_min: float | None,
+    r_max: float | None,
+    exponent: float | None,
+    bandwidth: float | None,
+    bootstrap: int,
+    **reading: Any,
+) -> int:
+    """Fit a cluster model by minimum contrast, with 95 % intervals by parametric bootstrap.
+
+    Prints parameters with units as text, or everything as JSON with --json. Exit status 3: the data cannot
+    tell.
+    """
+    from geoclust import workflow
+    from geoclust.fitting.fit import fit_clusters
+    from geoclust.report.record import fit_record
+    from geoclust.report.tables import text_lines
+    from geoclust.seeds import stream
+
+    with Talk(quiet) as talk:
+        survey = workflow.read_survey(points, area, **reading)
+        used = chosen_seed(seed, talk)
+        found, status, reason = None, "ok", ""
+        try:
+            found = fit_clusters(
+                survey, model, function=function, r_min=r_min, r_max=r_max, exponent=exponent,
+                bandwidth=bandwidth, bootstrap=bootstrap, rng=stream(used, "fit"), workers=workers,
+                progress=talk.progress,
+            )  # fmt: skip
+            status, reason = found.status, found.reason
+        except CannotTell as verdict:
+            status, reason = verdict.status, str(verdict)
+        record = fit_record(
+            status=status, reason=reason, fit=found, envelopes=None, centres=None, audit=survey.audit,
+            choices={"model": model}, seed=used,
+        )  # fmt: skip
+        if out is not None:
+            put(as_json(record), out, overwrite)
+        if json:
+            put(as_json(record), None)
+        elif status == "ok" and found is not None:
+            put("\n".join(text_lines(found, survey)), None)
+        if status != "ok":
+            talk.say(f"cannot tell ({status}): {reason}")
+        return 0 if status == "ok" else CannotTell.exit_status
