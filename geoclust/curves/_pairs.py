@@ -67,6 +67,12 @@ def cell_order(x, y, left, bottom, cell, columns, rows):
 
 
 @njit(nogil=True, cache=True)
+def cell_of(first, point):
+    """The cell that holds a point, by its place in the order of cells."""
+    return np.searchsorted(first, point, side="right") - 1
+
+
+@njit(nogil=True, cache=True)
 def guess_table(squared, size):
     """For each of `size` equal steps of distance, the first class that may hold it."""
     largest = np.sqrt(squared[-1])
@@ -114,7 +120,7 @@ def deep_cells(occupied, columns, rows, reach):
 
 @njit(nogil=True, cache=True)
 def add_pairs(points, classes, low, high, out):
-    """Add the weights of all unordered pairs whose first point lies in cells `low` to `high`, twice.
+    """Add the weights of all unordered pairs whose first point is one of `low` to `high`, twice.
 
     `out` is (classes, 3): sums of w/d, w and w d. Coincident pairs are counted
     in w alone: their distance is zero.
@@ -126,10 +132,12 @@ def add_pairs(points, classes, low, high, out):
     # squared distances of a run of candidates, and which of them are near enough
     near_d2 = np.empty(1024)
     near_k = np.empty(1024, np.int64)
-    for c in range(low, high):
+    for c in range(cell_of(first, low), first.size - 1):
+        if first[c] >= high:
+            break
         j = c // columns
         i = c - j * columns
-        for a in range(first[c], first[c + 1]):
+        for a in range(max(first[c], low), min(first[c + 1], high)):
             ax, ay = x[a], y[a]
             for up in range(FINE + 1):
                 jj = j + up
@@ -213,10 +221,12 @@ def add_isotropic_excess(points, grid, classes, low, high, out):
     room = 256
     local = np.empty((4, room))
     reach = largest + 0.5 * grid.cell
-    for c in range(low, high):
+    for c in range(cell_of(first, low), first.size - 1):
+        if first[c] >= high:
+            break
         j = c // columns
         i = c - j * columns
-        for a in range(first[c], first[c + 1]):
+        for a in range(max(first[c], low), min(first[c + 1], high)):
             if points.depth[a] >= largest or (led and points.lead[a] == 0.0):
                 continue
             ax, ay = x[a], y[a]

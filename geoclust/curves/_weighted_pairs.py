@@ -6,7 +6,7 @@ import numpy as np
 from numba import njit
 
 from geoclust.area._covariance import covariance, look_up
-from geoclust.curves._pairs import FINE
+from geoclust.curves._pairs import FINE, cell_of
 
 
 @njit(nogil=True, cache=True)
@@ -61,15 +61,17 @@ def add_shifted_pairs(points, classes, table, low_share, tree, grid, whole, hair
     first_at = np.empty(2 * rings)
     first_sign = np.empty(2 * rings, np.int64)
     balance = np.empty(2 * rings, np.int64)
-    for c in range(low, high):
-        j = c // columns
-        i = c - j * columns
+    for c in range(cell_of(first, low), first.size - 1):
+        if first[c] >= high:
+            break
         if first[c + 1] == first[c]:
             continue
+        j = c // columns
+        i = c - j * columns
         most = candidates(points, i, j) + 1
         if most > near.size:
             near = np.empty(2 * most, np.int64)
-        for a in range(first[c], first[c + 1]):
+        for a in range(max(first[c], low), min(first[c + 1], high)):
             found = gather(points, a, i, j, last, near)
             for h in range(found):
                 b = near[h]
@@ -106,15 +108,17 @@ def add_deep_pairs(points, classes, limits, depths, tail, low, high, out):
     weighted = points.weight.size > 0
     last = classes.squared[-1]
     near = np.empty(256, np.int64)
-    for c in range(low, high):
-        j = c // columns
-        i = c - j * columns
+    for c in range(cell_of(first, low), first.size - 1):
+        if first[c] >= high:
+            break
         if first[c + 1] == first[c]:
             continue
+        j = c // columns
+        i = c - j * columns
         most = candidates(points, i, j) + 1
         if most > near.size:
             near = np.empty(2 * most, np.int64)
-        for a in range(first[c], first[c + 1]):
+        for a in range(max(first[c], low), min(first[c + 1], high)):
             found = gather(points, a, i, j, last, near)
             for h in range(found):
                 b = near[h]

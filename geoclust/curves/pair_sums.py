@@ -4,7 +4,6 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
-from itertools import pairwise
 
 import numpy as np
 import numpy.typing as npt
@@ -139,9 +138,9 @@ def pair_sums(
     else:
         raise not_allowed("edge_weight", EDGE_WEIGHTS, edge_weight)
 
-    def block(cells: tuple[int, int]) -> Floats:
+    def block(part: tuple[int, int]) -> Floats:
         out = np.zeros((len(limits), columns))
-        work(cells[0], cells[1], out)
+        work(part[0], part[1], out)
         return out
 
     total = np.zeros((len(limits), columns))
@@ -150,7 +149,7 @@ def pair_sums(
     return PairSums(limits, total[:, :3], total[:, 3] if columns == 4 else None)
 
 
-# adds the pairs whose first point lies in a range of cells
+# adds the pairs whose first point is one of a range
 Work = Callable[[int, int, Floats], None]
 
 
@@ -170,8 +169,8 @@ def _isotropic(points: _pairs.SortedPoints, classes: _pairs.Classes, area: Study
 
     def work(low: int, high: int, out: Floats) -> None:
         _pairs.add_pairs(points, classes, low, high, out)
-        a, b = int(points.first[low]), int(points.first[high])
-        _pairs.fill_depths(grid, deep, points.x[a:b], points.y[a:b], largest, depth[a:b])
+        part = slice(low, high)
+        _pairs.fill_depths(grid, deep, points.x[part], points.y[part], largest, depth[part])
         _pairs.add_isotropic_excess(known, grid, classes, low, high, out)
 
     return work
@@ -277,14 +276,11 @@ def _sorted_points(
 
 
 def _blocks(points: _pairs.SortedPoints, area: StudyArea, largest: float) -> list[tuple[int, int]]:
-    """Consecutive cells with about BLOCK points each, fewer if these have many neighbours or edges."""
+    """Consecutive points, BLOCK of them or fewer if these have many neighbours or edges to look at."""
     n = len(points.x)
     disc = np.pi * largest**2
     neighbours = n * min(1.0, disc / area.area)
     minx, miny, maxx, maxy = area.bounds
     pieces = len(area.grid.x0) * min(1.0, disc / ((maxx - minx) * (maxy - miny)))
-    size = int(np.clip(STEPS / ((1.0 + neighbours) * (1.0 + pieces)), 16, BLOCK))
-    # the cell in which each multiple of the size is reached ends a block
-    ends = np.searchsorted(points.first[1:], np.arange(size, n + size, size), side="left") + 1
-    cells = np.unique(np.concatenate([[0], np.minimum(ends, len(points.first) - 1)])).tolist()
-    return list(pairwise(cells))
+    size = int(np.clip(STEPS / ((1.0 + neighbours) * (1.0 + pieces)), 1, BLOCK))
+    return [(a, min(a + size, n)) for a in range(0, n, size)]
