@@ -6,6 +6,10 @@ import numpy as np
 from numba import njit
 
 
+# shares below this are what rounding leaves of sums over edges: the cell lies outside
+ROUNDING = 1e-12
+
+
 @njit(nogil=True, cache=True)
 def cell_cover(x0, y0, x1, y1, columns, rows):
     """Area of W in each unit cell of a grid, edges given in units of cells.
@@ -64,5 +68,6 @@ def cell_cover(x0, y0, x1, y1, columns, rows):
         total = 0.0
         for i in range(columns):
             total += right[j, i]
-            own[j, i] = min(max(own[j, i] + total, 0.0), 1.0)
+            cover = own[j, i] + total
+            own[j, i] = min(cover, 1.0) if cover > ROUNDING else 0.0
     return own
