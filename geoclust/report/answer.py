@@ -192,7 +192,10 @@ def _clustered(survey: Survey, envelopes: Mapping[str, EnvelopeTest] | None, fit
 
 def _ranges(found: list[tuple[float, float, str]]) -> str:
     """Distances at which a curve leaves its envelope."""
-    texts = [f"{low:.3g} m" if low == high else f"{low:.3g} to {high:.3g} m" for low, high, _ in found[:3]]
+    texts = [
+        f"{words.distance(high)} m" if low == high else f"{words.distance(low)} to {words.distance(high)} m"
+        for low, high, _ in found[:3]
+    ]
     return words.listed(texts)
 
 
@@ -243,10 +246,18 @@ def _where(centres: CentreMap) -> str:
     if len(clusters) == 0:
         return f"{text}."
     largest = clusters.loc[clusters["points"].idxmax()]
-    return (
-        f"{text}. **{words.plural(len(clusters), 'cluster')}** could be outlined; the largest, number "
-        f"{int(largest['cluster'])}, has {int(largest['points']):,} points."
+    text = (
+        f"{text}. **{words.plural(len(clusters), 'group')}** of points could be outlined as clusters; the "
+        "largest, "
+        f"number {int(largest['cluster'])}, has {int(largest['points']):,} points"
     )
+    if len(clusters) > centres.interval_inside()[2]:
+        text += (
+            ". These are more than there are centres, because points that may belong to either of two "
+            "neighbours are "
+            "outlined apart"
+        )
+    return f"{text}."
 
 
 def share_holding_half(centres: CentreMap) -> float:
@@ -285,7 +296,8 @@ def _unexplained(envelopes: Mapping[str, EnvelopeTest] | None, fit: ClusterFit) 
     if left is None:
         return ""
     return (
-        f" Between {left[0]:.3g} and {left[1]:.3g} m points still have more neighbours than the fitted "
+        f" Between {words.distance(left[0])} and {words.distance(left[1])} m points still have more "
+        "neighbours than the fitted "
         "clusters give "
         "them: clusters lie in groups, or the terrain draws them together, which this model leaves out."
     )

@@ -87,6 +87,7 @@ def centre_map(centres: CentreMap, survey: Survey) -> Figure:
         ]
         keys += _ground(sheet, survey, centres.zones, None, fill=None)
         labels = [_ramp_label(value) for value in breaks]
+        labels = [text if text != before else "" for before, text in zip(["", *labels], labels, strict=False)]
         _draw_ramp(sheet, np.linspace(0.0, 1.0, len(breaks)), labels, "expected cluster centres per hectare")
         _finish(sheet, keys)
         return sheet.figure

@@ -72,6 +72,17 @@ def interval(low: float, high: float, digits: int = 3) -> str:
     return f"95 % interval {between(low, high, digits)}"
 
 
+def distance(metres: float) -> str:
+    """A distance in metres with two digits that count.
+
+    Examples
+    --------
+    >>> distance(3.469), distance(5.0), distance(132.4)
+    ('3.5', '5', '130')
+    """
+    return number(metres, 2).removesuffix(".0")
+
+
 def counts_between(low: float, high: float) -> str:
     """An interval of counts.
 
