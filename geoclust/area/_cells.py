@@ -5,7 +5,6 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
-
 # shares below this are what rounding leaves of sums over edges: the cell lies outside
 ROUNDING = 1e-12
 
