@@ -20,6 +20,7 @@ from geoclust.area._edges import is_inside
 TWO_PI = 2.0 * np.pi
 # below this angle the argument cannot tell an empty circle from a full one
 HAIR = 1e-9
+ASIDE = (float(np.cos(1.0)), float(np.sin(1.0)))
 
 
 @njit(nogil=True, cache=True, inline="always")
@@ -64,11 +65,15 @@ def cross_piece(ax, ay, bx, by, r2, re, im):
 @njit(nogil=True, cache=True)
 def share_from_product(grid, cx, cy, r, re, im, crossings):
     """Turn the product of crossings into a share of the circle."""
-    angle = np.arctan2(im, re) if crossings > 0 else 0.0
+    if crossings == 0:
+        # all of it is on one side; a point in no round direction, so that it is not where a
+        # circle of round numbers touches an edge
+        return 1.0 if is_inside(grid, cx + r * ASIDE[0], cy + r * ASIDE[1]) else 0.0
+    angle = np.arctan2(im, re)
     if abs(angle) > HAIR:
         return angle / TWO_PI if angle > 0.0 else 1.0 + angle / TWO_PI
-    # no crossing, or arcs too short to tell: by far the greater part of the circle is
-    # on one side, so points of it decide
+    # arcs too short to tell: by far the greater part of the circle is on one side, so
+    # points of it decide
     votes = 0
     for k in range(3):
         t = 1.0 + 2.0 * k
@@ -84,6 +89,13 @@ def circle_share(grid, cx, cy, r):
     """Share of the circle of radius `r` round (cx, cy) that lies in W."""
     if r <= 0.0:
         return 1.0 if is_inside(grid, cx, cy) else 0.0
+    i = int(np.floor((cx - grid.left) / grid.cell))
+    j = int(np.floor((cy - grid.bottom) / grid.cell))
+    if 0 <= i < grid.columns and 0 <= j < grid.rows:
+        home = j * grid.columns + i
+        # pieces reach half a cell beyond the cell they are filed under
+        if r < (grid.gap[home] - 1.5) * grid.cell:
+            return 1.0 if grid.inside[home] else 0.0
     r2 = r * r
     half = 0.5 * grid.cell * (1.0 + 1e-12)
     outer = r + half

@@ -21,6 +21,8 @@ from numba import njit
 # polygon drawn on round coordinates falls on a line through a reference point.
 REFERENCE_X = 0.6180339887498949
 REFERENCE_Y = 0.4142135623730951
+# more steps than any grid is wide
+FAR_CELLS = 1 << 20
 
 
 class EdgeGrid(NamedTuple):
@@ -33,6 +35,7 @@ class EdgeGrid(NamedTuple):
     first: np.ndarray  # (cells + 1,) where the pieces of each cell begin
     inside: np.ndarray  # (cells,) is the reference point of the cell in W
     quiet: np.ndarray  # (cells,) no piece in the cell or in its eight neighbours
+    gap: np.ndarray  # (cells,) steps, king's moves, to the nearest cell with a piece
     left: float
     bottom: float
     cell: float
@@ -89,7 +92,7 @@ def file_pieces(pieces, left, bottom, cell, columns, rows):
 
 @njit(nogil=True, cache=True)
 def mark_cells(pieces, first, left, bottom, cell, columns, rows):
-    """Tell for each cell whether its reference point is in W, and whether it is quiet."""
+    """Tell for each cell whether its reference point is in W, whether it is quiet, and its gap."""
     turns = np.zeros((rows, columns + 1), np.int32)
     for k in range(pieces.shape[1]):
         ax, ay, bx, by = pieces[0, k], pieces[1, k], pieces[2, k], pieces[3, k]
@@ -108,20 +111,32 @@ def mark_cells(pieces, first, left, bottom, cell, columns, rows):
                 turns[j, min(max(i, 0), columns)] += 1 if by < ay else -1
             j += 1
     inside = np.zeros(columns * rows, np.bool_)
-    quiet = np.zeros(columns * rows, np.bool_)
+    gap = np.empty((rows, columns), np.int32)
     for j in range(rows):
         winding = 0
         for i in range(columns):
             winding += turns[j, i]
-            inside[j * columns + i] = winding > 0
-            empty = True
-            for jj in range(max(j - 1, 0), min(j + 2, rows)):
-                a = jj * columns + max(i - 1, 0)
-                b = jj * columns + min(i + 1, columns - 1)
-                if first[b + 1] > first[a]:
-                    empty = False
-            quiet[j * columns + i] = empty
-    return inside, quiet
+            c = j * columns + i
+            inside[c] = winding > 0
+            # a sweep from the south-west, then one from the north-east
+            nearest = 0 if first[c + 1] > first[c] else FAR_CELLS
+            if j > 0:
+                for ii in range(max(i - 1, 0), min(i + 2, columns)):
+                    nearest = min(nearest, gap[j - 1, ii] + 1)
+            if i > 0:
+                nearest = min(nearest, gap[j, i - 1] + 1)
+            gap[j, i] = nearest
+    for j in range(rows - 1, -1, -1):
+        for i in range(columns - 1, -1, -1):
+            nearest = gap[j, i]
+            if j < rows - 1:
+                for ii in range(max(i - 1, 0), min(i + 2, columns)):
+                    nearest = min(nearest, gap[j + 1, ii] + 1)
+            if i < columns - 1:
+                nearest = min(nearest, gap[j, i + 1] + 1)
+            gap[j, i] = nearest
+    flat = gap.reshape(columns * rows)
+    return inside, flat > 1, flat
 
 
 @njit(nogil=True, cache=True)

@@ -114,9 +114,9 @@ class StudyArea:
         )
         order, first = _edges.file_pieces(pieces, left, bottom, cell, columns, rows)
         pieces = np.ascontiguousarray(pieces[:, order])
-        inside, quiet = _edges.mark_cells(pieces, first, left, bottom, cell, columns, rows)
+        inside, quiet, gap = _edges.mark_cells(pieces, first, left, bottom, cell, columns, rows)
         return _edges.EdgeGrid(
-            pieces[0], pieces[1], pieces[2], pieces[3], first, inside, quiet,
+            pieces[0], pieces[1], pieces[2], pieces[3], first, inside, quiet, gap,
             float(left), float(bottom), float(cell), columns, rows,
         )  # fmt: skip
 
