@@ -23,6 +23,17 @@ REACH = 8.6
 _nodes, _weights = np.polynomial.legendre.leggauss(12)
 NODES = tuple(float(v) for v in _nodes)
 WEIGHTS = tuple(float(v) for v in _weights)
+# and five do for panels up to half a sigma, which is what a ragged boundary is made of
+_nodes, _weights = np.polynomial.legendre.leggauss(5)
+SHORT_NODES = tuple(float(v) for v in _nodes)
+SHORT_WEIGHTS = tuple(float(v) for v in _weights)
+
+
+@njit(nogil=True, cache=True, inline="always")
+def entire(d2, sigma):
+    """(1 - exp(-z)) / z at z = d2 / 2 sigma², without cancellation."""
+    z = d2 / (2.0 * sigma * sigma)
+    return -np.expm1(-z) / z if z > 1e-300 else 1.0
 
 
 @njit(nogil=True, cache=True)
@@ -53,13 +64,17 @@ def piece_deficit(ax, ay, bx, by, sigma):
     panels = int(np.ceil((t1 - t0) / (2.0 * sigma)))
     step = (t1 - t0) / panels
     within = 0.0
-    for p in range(panels):
-        middle = t0 + (p + 0.5) * step
-        for q in range(12):
-            t = middle + 0.5 * step * NODES[q]
-            z = (h * h + t * t) / (2.0 * sigma * sigma)
-            # (1 - exp(-z)) / z without cancellation
-            within += WEIGHTS[q] * (-np.expm1(-z) / z if z > 1e-300 else 1.0)
+    if step <= 0.5 * sigma:
+        middle = t0 + 0.5 * step
+        for q in range(5):
+            t = middle + 0.5 * step * SHORT_NODES[q]
+            within += SHORT_WEIGHTS[q] * entire(h * h + t * t, sigma)
+    else:
+        for p in range(panels):
+            middle = t0 + (p + 0.5) * step
+            for q in range(12):
+                t = middle + 0.5 * step * NODES[q]
+                within += WEIGHTS[q] * entire(h * h + t * t, sigma)
     within *= 0.5 * step * h / (2.0 * sigma * sigma)
     # the angle under which the clipped piece is seen
     turn = np.arctan2(h * (t1 - t0), h * h + t0 * t1)

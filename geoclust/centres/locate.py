@@ -39,7 +39,9 @@ def locate_centres(
     Centres may lie anywhere in the study area and within a few scales outside
     it. Births, deaths, displacements, splits and merges of centres are accepted
     so that the chain visits configurations in proportion to their posterior
-    probability (van Lieshout & Baddeley 2002; Møller & Waagepetersen 2004).
+    probability (van Lieshout & Baddeley 2002; Møller & Waagepetersen 2004). If the
+    fit is itself a posterior sample, its centres are used, so that the map carries
+    the uncertainty of the parameters too; otherwise they are taken as known.
 
     Parameters
     ----------
@@ -89,11 +91,18 @@ def locate_centres(
         raise UsageError("The template raster does not overlap the study area.")
 
     chain_seed, prediction_seed = np.random.default_rng(rng).spawn(2)
-    setup = ChainSetup(survey.local_xy, area, fit.model, workers=workers)
-    sample = sample_until_converged(setup, rng=chain_seed, chains=chains, workers=workers, progress=progress)
+    sample = fit.sample
+    if sample is None:
+        setup = ChainSetup(survey.local_xy, area, fit.model, workers=workers)
+        sample = sample_until_converged(
+            setup, rng=chain_seed, chains=chains, workers=workers, progress=progress
+        )
     draws = sample.draws
     mean, sd, probability = centre_maps(draws, area, grid, cover)
     points, clusters = delineate(draws, survey.local_xy, area)
+    predicted = None
+    if unsurveyed is not None:
+        predicted = predict_unsurveyed(unsurveyed, sample.setup, draws, prediction_seed)
     r_hat, enough = sample.worst
     return CentreMap(
         grid=grid,
@@ -103,7 +112,7 @@ def locate_centres(
         cell_areas=cover,
         number_inside=draws.number_inside,
         number_all=draws.number_all,
-        margin=setup.margin,
+        margin=sample.setup.margin,
         r_hat=r_hat,
         effective_sample_size=enough,
         converged=sample.converged,
@@ -111,6 +120,8 @@ def locate_centres(
         clusters=clusters,
         zones=None if zones is None else zone_numbers(zones, draws, survey.local_xy, area),
         unsurveyed=(
-            None if unsurveyed is None else predict_unsurveyed(unsurveyed, setup, draws, prediction_seed)
+            None
+            if unsurveyed is None
+            else predict_unsurveyed(unsurveyed, sample.setup, draws, prediction_seed)
         ),
     )

@@ -5,13 +5,13 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
+from geoclust.fitting._kernels import kernel_peak, kernel_shape
 from geoclust.fitting._moves import (
     BACKGROUND,
     ETA,
     EXPOSURE,
     RESCALE,
     SCALE,
-    kernel_value,
     prior_ratio,
     recompute,
     span,
@@ -30,7 +30,7 @@ def log_scale_prior(target, scale):
 
 
 @njit(nogil=True, cache=True)
-def try_rescale(data, target, table, state, spare_density, spare_share, step, rng):
+def try_rescale(data, target, table, state, work, step, rng):
     """Random walk of the log scale, centres fixed."""
     state.tried[RESCALE] += 1
     old = state.scalars[SCALE]
@@ -40,18 +40,26 @@ def try_rescale(data, target, table, state, spare_density, spare_share, step, rn
         t = (np.log(new) - table.log_scale) / table.log_step
         if t < 0.0 or t > table.start.size - 1:
             return
-    exposure = recompute(data, target, state, new, spare_density, spare_share, table)
+    exposure = recompute(data, target, state, new, work.density, work.share, table)
     log_a = log_scale_prior(target, new) - log_scale_prior(target, old)
+    # densities are relative to the peak of their kernel
+    peaks = kernel_peak(target.kernel, new) / kernel_peak(target.kernel, old)
+    over, under = 1.0, 1.0
     for k in range(data.x.size):
-        if spare_density[k] <= 0.0:
+        if work.density[k] <= 0.0:
             return
-        log_a += np.log(spare_density[k] / state.density[k])
+        over *= peaks * work.density[k]
+        under *= state.density[k]
+        if over < 1e-100 or under < 1e-100 or over > 1e100 or under > 1e100:
+            log_a += np.log(over / under)
+            over, under = 1.0, 1.0
+    log_a += np.log(over / under)
     log_a += prior_ratio(data, target, state, 0, exposure)
     if np.log(rng.random()) < log_a:
         state.scalars[SCALE] = new
         state.scalars[EXPOSURE] = exposure
-        state.density[:] = spare_density
-        state.share[: state.number[0]] = spare_share[: state.number[0]]
+        state.density[:] = work.density
+        state.share[: state.number[0]] = work.share[: state.number[0]]
         state.taken[RESCALE] += 1
 
 
@@ -66,8 +74,10 @@ def try_background(data, target, state, step, rng):
     # exponential prior; the walk is in the logarithm
     log_a = (old - new) / target.background_mean + np.log(new / old)
     ratio = 1.0
+    # densities are relative to the kernel's peak
+    more = (new - old) / kernel_peak(target.kernel, state.scalars[SCALE])
     for k in range(data.x.size):
-        after = state.density[k] - old + new
+        after = state.density[k] + more
         if after <= 0.0:
             return
         ratio *= after / state.density[k]
@@ -79,13 +89,13 @@ def try_background(data, target, state, step, rng):
     log_a -= (data.x.size + target.mu_shape) * np.log((rest + new * data.area) / (rest + old * data.area))
     if np.log(rng.random()) < log_a:
         for k in range(data.x.size):
-            state.density[k] += new - old
+            state.density[k] += more
         state.scalars[ETA] = new
         state.taken[BACKGROUND] += 1
 
 
 @njit(nogil=True, cache=True)
-def run(data, target, table, state, near, fresh, spare_density, spare_share, steps, every, walk, rng):
+def run(data, target, table, state, work, steps, every, walk, rng):
     """Make `steps` moves of centres, and a walk of scale and background after `every` of them.
 
     Returns the moves made: fewer if the arrays for centres are full.
@@ -96,18 +106,18 @@ def run(data, target, table, state, near, fresh, spare_density, spare_share, ste
             return step
         u = rng.random()
         if u < 0.2:
-            try_birth(data, target, table, state, near, fresh, rng)
+            try_birth(data, target, table, state, work, rng)
         elif u < 0.4:
-            try_death(data, target, state, near, fresh, rng)
+            try_death(data, target, state, work, rng)
         elif u < 0.7:
-            try_shift(data, target, table, state, near, fresh, rng)
+            try_shift(data, target, table, state, work, rng)
         elif u < 0.85:
-            try_split(data, target, table, state, near, fresh, rng)
+            try_split(data, target, table, state, work, rng)
         else:
-            try_merge(data, target, table, state, near, fresh, rng)
+            try_merge(data, target, table, state, work, rng)
         if (step + 1) % every == 0:
             if target.free_scale:
-                try_rescale(data, target, table, state, spare_density, spare_share, walk[0], rng)
+                try_rescale(data, target, table, state, work, walk[0], rng)
             if target.with_background:
                 try_background(data, target, state, walk[1], rng)
     # take off the rounding that many small changes have left
@@ -126,8 +136,9 @@ def draw_members(data, target, state, owner, weight, rng):
     """
     scale = state.scalars[SCALE]
     reach = target.reach * scale
-    limit = reach * reach
-    weight[:] = state.scalars[ETA]
+    per = 1.0 / (scale * scale)
+    most = target.reach * target.reach
+    weight[:] = state.scalars[ETA] / kernel_peak(target.kernel, scale)
     owner[:] = -1
     for c in range(state.number[0]):
         cx, cy = state.centres[c, 0], state.centres[c, 1]
@@ -138,9 +149,8 @@ def draw_members(data, target, state, owner, weight, rng):
         for j in range(j0, j1 + 1):
             for k in range(data.first[j * data.columns + i0], data.first[j * data.columns + i1 + 1]):
                 dx, dy = data.x[k] - cx, data.y[k] - cy
-                d2 = dx * dx + dy * dy
-                if d2 <= limit:
-                    w = kernel_value(target.kernel, d2, scale)
+                w = kernel_shape(target.kernel, (dx * dx + dy * dy) * per, most)
+                if w > 0.0:
                     weight[k] += w
                     if rng.random() * weight[k] < w:
                         owner[k] = c

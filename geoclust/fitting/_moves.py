@@ -25,8 +25,8 @@ import numpy as np
 from numba import njit
 
 from geoclust.area._edges import is_inside
-
-GAUSSIAN, DISC, CAUCHY = 0, 1, 2
+from geoclust.fitting._kernels import add_shapes, draw_offset, kernel_peak, kernel_shape
+from geoclust.fitting._table import share_at
 
 
 class Data(NamedTuple):
@@ -44,20 +44,6 @@ class Data(NamedTuple):
     wide_cells: np.ndarray  # cells of it to draw uniform points from
     wide_area: float
     area: float
-
-
-class ShareTable(NamedTuple):
-    """Share of a kernel that falls in the study area, tabulated over place and log scale."""
-
-    values: np.ndarray  # (total,) levels one after the other, row by row
-    start: np.ndarray  # (levels,) where each level begins
-    left: np.ndarray  # (levels,)
-    bottom: np.ndarray
-    step: np.ndarray
-    columns: np.ndarray
-    rows: np.ndarray
-    log_scale: float  # of level 0
-    log_step: float
 
 
 class Target(NamedTuple):
@@ -80,12 +66,22 @@ class Target(NamedTuple):
     uniform_share: float  # of births proposed anywhere rather than near points
 
 
+class Work(NamedTuple):
+    """Room for one move at a time."""
+
+    rows: np.ndarray  # (2,) int, centres that go
+    cells: np.ndarray  # (4,) int, first and last column and row of cells touched
+    fresh: np.ndarray  # (n,) new densities of the points in those cells, in order
+    density: np.ndarray  # (n,) densities under another scale
+    share: np.ndarray  # (room,) shares under another scale
+
+
 class State(NamedTuple):
     """The chain: arrays that the moves change in place."""
 
     centres: np.ndarray  # (room, 2)
     share: np.ndarray  # (room,)
-    density: np.ndarray  # (n,) eta + sum of kernels at each point
+    density: np.ndarray  # (n,) eta + sum of kernels at each point, relative to the kernel's peak
     number: np.ndarray  # (1,) int, centres in use
     scalars: np.ndarray  # (3,) scale, eta, sum of shares
     tried: np.ndarray  # (moves,) int
@@ -100,102 +96,6 @@ SPLIT_CUT = 3.0
 
 
 @njit(nogil=True, cache=True, inline="always")
-def kernel_value(kernel, d2, scale):
-    """Density of an offspring at squared distance d2, per square metre."""
-    z = d2 / (scale * scale)
-    if kernel == GAUSSIAN:
-        return np.exp(-0.5 * z) / (2.0 * np.pi * scale * scale)
-    if kernel == DISC:
-        return 1.0 / (np.pi * scale * scale) if z <= 1.0 else 0.0
-    return (1.0 + z) ** -1.5 / (2.0 * np.pi * scale * scale)
-
-
-@njit(nogil=True, cache=True)
-def draw_offset(kernel, scale, rng):
-    """Draw one offset from the kernel."""
-    if kernel == GAUSSIAN:
-        return scale * rng.standard_normal(), scale * rng.standard_normal()
-    turn = 2.0 * np.pi * rng.random()
-    u = rng.random()
-    if kernel == DISC:
-        r = scale * np.sqrt(u)
-    else:
-        r = scale * np.sqrt(1.0 / ((1.0 - u) * (1.0 - u)) - 1.0)
-    return r * np.cos(turn), r * np.sin(turn)
-
-
-@njit(nogil=True, cache=True)
-def cubic(t, w):
-    """Weights of four equally spaced nodes -1, 0, 1, 2 at position t in [0, 1]."""
-    w[0] = -t * (t - 1.0) * (t - 2.0) / 6.0
-    w[1] = (t + 1.0) * (t - 1.0) * (t - 2.0) / 2.0
-    w[2] = -(t + 1.0) * t * (t - 2.0) / 2.0
-    w[3] = (t + 1.0) * t * (t - 1.0) / 6.0
-
-
-@njit(nogil=True, cache=True)
-def quintic(t, w):
-    """Weights of six equally spaced nodes -2 .. 3 at position t in [0, 1]."""
-    a, b, c, d, e, f = t + 2.0, t + 1.0, t, t - 1.0, t - 2.0, t - 3.0
-    w[0] = -b * c * d * e * f / 120.0
-    w[1] = a * c * d * e * f / 24.0
-    w[2] = -a * b * d * e * f / 12.0
-    w[3] = a * b * c * e * f / 12.0
-    w[4] = -a * b * c * d * f / 24.0
-    w[5] = a * b * c * d * e / 120.0
-
-
-@njit(nogil=True, cache=True)
-def level_share(table, level, x, y):
-    """Share at one tabulated scale, by quintic interpolation over place."""
-    step = table.step[level]
-    columns, rows = table.columns[level], table.rows[level]
-    u = (x - table.left[level]) / step
-    v = (y - table.bottom[level]) / step
-    i = min(max(int(np.floor(u)), 2), columns - 4)
-    j = min(max(int(np.floor(v)), 2), rows - 4)
-    start = table.start[level]
-    # away from the boundary the share is flat
-    home = start + j * columns + i
-    corner = table.values[home]
-    if (corner == 0.0 or corner == 1.0) and (
-        table.values[home - 2 * columns - 2] == corner
-        and table.values[home - 2 * columns + 3] == corner
-        and table.values[home + 3 * columns - 2] == corner
-        and table.values[home + 3 * columns + 3] == corner
-    ):
-        return corner
-    wu = np.empty(6)
-    wv = np.empty(6)
-    quintic(u - i, wu)
-    quintic(v - j, wv)
-    total = 0.0
-    for q in range(6):
-        row = home + (q - 2) * columns - 2
-        part = 0.0
-        for p in range(6):
-            part += wu[p] * table.values[row + p]
-        total += wv[q] * part
-    return min(max(total, 0.0), 1.0)
-
-
-@njit(nogil=True, cache=True)
-def share_at(table, x, y, scale):
-    """Share of the kernel round (x, y) that falls in the study area."""
-    levels = table.start.size
-    if levels == 1:
-        return level_share(table, 0, x, y)
-    t = (np.log(scale) - table.log_scale) / table.log_step
-    base = min(max(int(np.floor(t)), 1), levels - 3)
-    w = np.empty(4)
-    cubic(t - base, w)
-    total = 0.0
-    for q in range(4):
-        total += w[q] * level_share(table, base + q - 1, x, y)
-    return min(max(total, 0.0), 1.0)
-
-
-@njit(nogil=True, cache=True, inline="always")
 def span(low, high, cell, count):
     """First and last cell that [low, high] touches, kept in the grid."""
     return max(int(np.floor(low / cell)), 0), min(int(np.floor(high / cell)), count - 1)
@@ -204,9 +104,10 @@ def span(low, high, cell, count):
 @njit(nogil=True, cache=True)
 def recompute(data, target, state, scale, density, share, table):
     """Densities at all points and shares of all centres from scratch; returns the sum of shares."""
-    density[:] = state.scalars[ETA]
+    density[:] = state.scalars[ETA] / kernel_peak(target.kernel, scale)
     reach = target.reach * scale
-    limit = reach * reach
+    per = 1.0 / (scale * scale)
+    most = target.reach * target.reach
     exposure = 0.0
     for c in range(state.number[0]):
         cx, cy = state.centres[c, 0], state.centres[c, 1]
@@ -217,86 +118,106 @@ def recompute(data, target, state, scale, density, share, table):
         if i0 > i1:
             continue
         for j in range(j0, j1 + 1):
-            for k in range(data.first[j * data.columns + i0], data.first[j * data.columns + i1 + 1]):
-                dx, dy = data.x[k] - cx, data.y[k] - cy
-                d2 = dx * dx + dy * dy
-                if d2 <= limit:
-                    density[k] += kernel_value(target.kernel, d2, scale)
+            a, b = data.first[j * data.columns + i0], data.first[j * data.columns + i1 + 1]
+            add_shapes(target.kernel, data.x[a:b], data.y[a:b], cx, cy, per, most, 1.0, density[a:b])
     return exposure
 
 
 @njit(nogil=True, cache=True)
-def density_without(data, target, state, k, skip_a, skip_b):
-    """Density at one point from scratch, two centres left out: subtraction would lose all digits."""
+def density_afresh(data, target, state, k, skip_a, skip_b, come, ax, ay, bx, by):
+    """New density at one point from scratch: subtraction would lose its digits."""
     scale = state.scalars[SCALE]
-    limit = (target.reach * scale) ** 2
-    total = state.scalars[ETA]
+    per = 1.0 / (scale * scale)
+    most = target.reach * target.reach
+    x, y = data.x[k], data.y[k]
+    total = state.scalars[ETA] / kernel_peak(target.kernel, scale)
     for c in range(state.number[0]):
         if c != skip_a and c != skip_b:
-            dx, dy = data.x[k] - state.centres[c, 0], data.y[k] - state.centres[c, 1]
-            d2 = dx * dx + dy * dy
-            if d2 <= limit:
-                total += kernel_value(target.kernel, d2, scale)
+            dx, dy = x - state.centres[c, 0], y - state.centres[c, 1]
+            total += kernel_shape(target.kernel, (dx * dx + dy * dy) * per, most)
+    if come > 0:
+        total += kernel_shape(target.kernel, ((x - ax) ** 2 + (y - ay) ** 2) * per, most)
+    if come > 1:
+        total += kernel_shape(target.kernel, ((x - bx) ** 2 + (y - by) ** 2) * per, most)
     return total
 
 
 @njit(nogil=True, cache=True)
-def exchange(data, target, state, minus, plus, near, fresh):
-    """Densities if the centres `minus` (rows, -1 for none) gave way to the places `plus`.
+def exchange(data, target, state, gone, come, ax, ay, bx, by, work):
+    """Densities if `gone` centres gave way to `come` new ones.
 
-    Fills `near` with the points affected and `fresh` with their new densities;
-    returns their number and the change of the log likelihood, -inf if a point
-    would be left without a centre.
+    The centres that go are rows work.rows[0] and work.rows[1] (as many as `gone`); the new
+    places are (ax, ay) and (bx, by), as many as `come`. Leaves the cells touched in
+    work.cells and the new densities of their points, in order, in work.fresh.
+
+    Returns
+    -------
+    change, kernels
+        Change of the log likelihood, -inf if a point would be left without a centre; for
+        one centre that goes or comes alone, the sum of its kernel over the points.
     """
     scale = state.scalars[SCALE]
     reach = target.reach * scale
-    limit = reach * reach
+    per = 1.0 / (scale * scale)
+    most = target.reach * target.reach
+    skip_a, skip_b = -1, -1
     x0, x1, y0, y1 = np.inf, -np.inf, np.inf, -np.inf
-    for m in minus:
-        if m >= 0:
-            x0, x1 = min(x0, state.centres[m, 0]), max(x1, state.centres[m, 0])
-            y0, y1 = min(y0, state.centres[m, 1]), max(y1, state.centres[m, 1])
-    for p in range(plus.shape[0]):
-        x0, x1 = min(x0, plus[p, 0]), max(x1, plus[p, 0])
-        y0, y1 = min(y0, plus[p, 1]), max(y1, plus[p, 1])
+    px, py, qx, qy = 0.0, 0.0, 0.0, 0.0
+    if gone > 0:
+        skip_a = work.rows[0]
+        px, py = state.centres[skip_a, 0], state.centres[skip_a, 1]
+        x0, x1, y0, y1 = px, px, py, py
+    if gone > 1:
+        skip_b = work.rows[1]
+        qx, qy = state.centres[skip_b, 0], state.centres[skip_b, 1]
+        x0, x1, y0, y1 = min(x0, qx), max(x1, qx), min(y0, qy), max(y1, qy)
+    if come > 0:
+        x0, x1, y0, y1 = min(x0, ax), max(x1, ax), min(y0, ay), max(y1, ay)
+    if come > 1:
+        x0, x1, y0, y1 = min(x0, bx), max(x1, bx), min(y0, by), max(y1, by)
     i0, i1 = span(x0 - reach - data.left, x1 + reach - data.left, data.cell, data.columns)
     j0, j1 = span(y0 - reach - data.bottom, y1 + reach - data.bottom, data.cell, data.rows)
-    count = 0
-    log_ratio = 0.0
-    ratio = 1.0
+    work.cells[0], work.cells[1], work.cells[2], work.cells[3] = i0, i1, j0, j1
     if i0 > i1:
-        return 0, 0.0
+        return 0.0, 0.0
+    # two passes: kernels in bulk, then ratios
+    fresh = work.fresh
+    at = 0
     for j in range(j0, j1 + 1):
-        for k in range(data.first[j * data.columns + i0], data.first[j * data.columns + i1 + 1]):
-            lost, gained = 0.0, 0.0
-            for m in minus:
-                if m >= 0:
-                    dx, dy = data.x[k] - state.centres[m, 0], data.y[k] - state.centres[m, 1]
-                    d2 = dx * dx + dy * dy
-                    if d2 <= limit:
-                        lost += kernel_value(target.kernel, d2, scale)
-            for p in range(plus.shape[0]):
-                dx, dy = data.x[k] - plus[p, 0], data.y[k] - plus[p, 1]
-                d2 = dx * dx + dy * dy
-                if d2 <= limit:
-                    gained += kernel_value(target.kernel, d2, scale)
-            if lost == 0.0 and gained == 0.0:
-                continue
-            before = state.density[k]
-            rest = before - lost
-            if lost > 0.0 and rest < 1e-6 * before:
-                rest = density_without(data, target, state, k, minus[0], minus[1])
-            after = rest + gained
-            if after <= 0.0:
-                return 0, -np.inf
-            near[count] = k
-            fresh[count] = after
-            count += 1
-            ratio *= after / before
-            if ratio > 1e100 or ratio < 1e-100:
-                log_ratio += np.log(ratio)
-                ratio = 1.0
-    return count, log_ratio + np.log(ratio)
+        a, b = data.first[j * data.columns + i0], data.first[j * data.columns + i1 + 1]
+        x, y, part = data.x[a:b], data.y[a:b], fresh[at : at + b - a]
+        part[:] = 0.0
+        if gone > 0:
+            add_shapes(target.kernel, x, y, px, py, per, most, -1.0, part)
+        if gone > 1:
+            add_shapes(target.kernel, x, y, qx, qy, per, most, -1.0, part)
+        if come > 0:
+            add_shapes(target.kernel, x, y, ax, ay, per, most, 1.0, part)
+        if come > 1:
+            add_shapes(target.kernel, x, y, bx, by, per, most, 1.0, part)
+        at += b - a
+    log_ratio, over, under, kernels = 0.0, 1.0, 1.0, 0.0
+    at = 0
+    for j in range(j0, j1 + 1):
+        a, b = data.first[j * data.columns + i0], data.first[j * data.columns + i1 + 1]
+        old, part = state.density[a:b], fresh[at : at + b - a]
+        for k in range(b - a):
+            before = old[k]
+            more = part[k]
+            kernels += more
+            after = before + more
+            if gone > 0 and after < 1e-4 * before:
+                after = density_afresh(data, target, state, a + k, skip_a, skip_b, come, ax, ay, bx, by)
+                if after <= 0.0:
+                    return -np.inf, 0.0
+            part[k] = after
+            over *= after
+            under *= before
+            if over < 1e-100 or under < 1e-100 or over > 1e100 or under > 1e100:
+                log_ratio += np.log(over / under)
+                over, under = 1.0, 1.0
+        at += b - a
+    return log_ratio + np.log(over / under), abs(kernels) * kernel_peak(target.kernel, scale)
 
 
 @njit(nogil=True, cache=True)
@@ -318,32 +239,27 @@ def prior_ratio(data, target, state, more, exposure):
     )
 
 
-@njit(nogil=True, cache=True)
-def birth_density(data, target, state, x, y):
-    """Density of proposing a birth at (x, y): anywhere in D, or an offset from a point."""
-    scale = state.scalars[SCALE]
-    reach = target.reach * scale
-    limit = reach * reach
-    i0, i1 = span(x - reach - data.left, x + reach - data.left, data.cell, data.columns)
-    j0, j1 = span(y - reach - data.bottom, y + reach - data.bottom, data.cell, data.rows)
-    total = 0.0
-    if i0 <= i1:
-        for j in range(j0, j1 + 1):
-            for k in range(data.first[j * data.columns + i0], data.first[j * data.columns + i1 + 1]):
-                dx, dy = data.x[k] - x, data.y[k] - y
-                d2 = dx * dx + dy * dy
-                if d2 <= limit:
-                    total += kernel_value(target.kernel, d2, scale)
-    share = target.uniform_share
-    near = (1.0 - share) * total / data.x.size if data.x.size > 0 else 0.0
-    return share / data.wide_area + near
+@njit(nogil=True, cache=True, inline="always")
+def birth_density(data, target, near_sum):
+    """Density of proposing a birth: anywhere in D, or an offset from a point.
+
+    `near_sum` is the sum of the kernel round the place over all points.
+    """
+    near = near_sum / data.x.size if data.x.size > 0 else 0.0
+    return target.uniform_share / data.wide_area + (1.0 - target.uniform_share) * near
 
 
 @njit(nogil=True, cache=True)
-def take(state, near, fresh, count, exposure):
+def take(data, state, work, exposure):
     """Accept: write the new densities and the sum of shares."""
-    for q in range(count):
-        state.density[near[q]] = fresh[q]
+    at = 0
+    for j in range(work.cells[2], work.cells[3] + 1):
+        if work.cells[0] > work.cells[1]:
+            break
+        a = data.first[j * data.columns + work.cells[0]]
+        b = data.first[j * data.columns + work.cells[1] + 1]
+        state.density[a:b] = work.fresh[at : at + b - a]
+        at += b - a
     state.scalars[EXPOSURE] = exposure
 
 
@@ -365,7 +281,7 @@ def add_centre(state, x, y, share):
 
 
 @njit(nogil=True, cache=True)
-def try_birth(data, target, table, state, near, fresh, rng):
+def try_birth(data, target, table, state, work, rng):
     state.tried[BIRTH] += 1
     scale = state.scalars[SCALE]
     if data.x.size == 0 or rng.random() < target.uniform_share:
@@ -381,41 +297,39 @@ def try_birth(data, target, table, state, near, fresh, rng):
         x, y = data.x[k] + dx, data.y[k] + dy
         if dx * dx + dy * dy > (target.reach * scale) ** 2 or not is_inside(data.wide, x, y):
             return
-    plus = np.empty((1, 2))
-    plus[0, 0], plus[0, 1] = x, y
-    count, change = exchange(data, target, state, (-1, -1), plus, near, fresh)
+    change, gained = exchange(data, target, state, 0, 1, x, y, 0.0, 0.0, work)
     share = share_at(table, x, y, scale)
     exposure = state.scalars[EXPOSURE] + share
     log_a = change + prior_ratio(data, target, state, 1, exposure)
-    log_a -= np.log((state.number[0] + 1) * birth_density(data, target, state, x, y))
+    log_a -= np.log((state.number[0] + 1) * birth_density(data, target, gained))
     if np.log(rng.random()) < log_a:
-        take(state, near, fresh, count, exposure)
+        take(data, state, work, exposure)
         add_centre(state, x, y, share)
         state.taken[BIRTH] += 1
 
 
 @njit(nogil=True, cache=True)
-def try_death(data, target, state, near, fresh, rng):
+def try_death(data, target, state, work, rng):
     state.tried[DEATH] += 1
     number = state.number[0]
     if number == 0:
         return
     c = int(rng.random() * number)
-    count, change = exchange(data, target, state, (c, -1), np.empty((0, 2)), near, fresh)
+    work.rows[0] = c
+    change, lost = exchange(data, target, state, 1, 0, 0.0, 0.0, 0.0, 0.0, work)
     if change == -np.inf:
         return
     exposure = state.scalars[EXPOSURE] - state.share[c]
     log_a = change + prior_ratio(data, target, state, -1, exposure)
-    x, y = state.centres[c, 0], state.centres[c, 1]
-    log_a += np.log(number * birth_density(data, target, state, x, y))
+    log_a += np.log(number * birth_density(data, target, lost))
     if np.log(rng.random()) < log_a:
-        take(state, near, fresh, count, exposure)
+        take(data, state, work, exposure)
         remove_centre(state, c)
         state.taken[DEATH] += 1
 
 
 @njit(nogil=True, cache=True)
-def try_shift(data, target, table, state, near, fresh, rng):
+def try_shift(data, target, table, state, work, rng):
     state.tried[SHIFT] += 1
     number = state.number[0]
     if number == 0:
@@ -428,15 +342,14 @@ def try_shift(data, target, table, state, near, fresh, rng):
     y = state.centres[c, 1] + size * rng.standard_normal()
     if not is_inside(data.wide, x, y):
         return
-    plus = np.empty((1, 2))
-    plus[0, 0], plus[0, 1] = x, y
-    count, change = exchange(data, target, state, (c, -1), plus, near, fresh)
+    work.rows[0] = c
+    change, _ = exchange(data, target, state, 1, 1, x, y, 0.0, 0.0, work)
     if change == -np.inf:
         return
     share = share_at(table, x, y, scale)
     exposure = state.scalars[EXPOSURE] - state.share[c] + share
     if np.log(rng.random()) < change + prior_ratio(data, target, state, 0, exposure):
-        take(state, near, fresh, count, exposure)
+        take(data, state, work, exposure)
         state.centres[c, 0], state.centres[c, 1] = x, y
         state.share[c] = share
         state.taken[SHIFT] += 1
@@ -463,7 +376,7 @@ def split_density(dx, dy, scale):
 
 
 @njit(nogil=True, cache=True)
-def try_split(data, target, table, state, near, fresh, rng):
+def try_split(data, target, table, state, work, rng):
     state.tried[SPLIT] += 1
     number = state.number[0]
     if number == 0:
@@ -475,36 +388,35 @@ def try_split(data, target, table, state, near, fresh, rng):
         dx, dy = sd * rng.standard_normal(), sd * rng.standard_normal()
         if dx * dx + dy * dy <= (SPLIT_CUT * sd) ** 2:
             break
-    plus = np.empty((2, 2))
-    ax, ay = state.centres[a, 0], state.centres[a, 1]
-    plus[0, 0], plus[0, 1] = ax + dx, ay + dy
-    plus[1, 0], plus[1, 1] = ax - dx, ay - dy
-    if not (is_inside(data.wide, plus[0, 0], plus[0, 1]) and is_inside(data.wide, plus[1, 0], plus[1, 1])):
+    ax, ay = state.centres[a, 0] + dx, state.centres[a, 1] + dy
+    bx, by = state.centres[a, 0] - dx, state.centres[a, 1] - dy
+    if not (is_inside(data.wide, ax, ay) and is_inside(data.wide, bx, by)):
         return
-    count, change = exchange(data, target, state, (a, -1), plus, near, fresh)
+    work.rows[0] = a
+    change, _ = exchange(data, target, state, 1, 2, ax, ay, bx, by, work)
     if change == -np.inf:
         return
-    share_0 = share_at(table, plus[0, 0], plus[0, 1], scale)
-    share_1 = share_at(table, plus[1, 0], plus[1, 1], scale)
+    share_0 = share_at(table, ax, ay, scale)
+    share_1 = share_at(table, bx, by, scale)
     exposure = state.scalars[EXPOSURE] - state.share[a] + share_0 + share_1
     limit = (2.0 * SPLIT_CUT * sd) ** 2
     # partners that a merge from the new state could choose, the twin included
-    n_0 = partners(state, plus[0, 0], plus[0, 1], a, -1, limit) + 1
-    n_1 = partners(state, plus[1, 0], plus[1, 1], a, -1, limit) + 1
+    n_0 = partners(state, ax, ay, a, -1, limit) + 1
+    n_1 = partners(state, bx, by, a, -1, limit) + 1
     back = (1.0 / n_0 + 1.0 / n_1) / (number + 1)
     # offset and its opposite give the same pair; four is the Jacobian of (a, d) -> (a + d, a - d)
     forth = 2.0 * split_density(dx, dy, scale) / number / 4.0
     log_a = change + prior_ratio(data, target, state, 1, exposure) + np.log(back / forth)
     if np.log(rng.random()) < log_a:
-        take(state, near, fresh, count, exposure)
-        state.centres[a, 0], state.centres[a, 1] = plus[0, 0], plus[0, 1]
+        take(data, state, work, exposure)
+        state.centres[a, 0], state.centres[a, 1] = ax, ay
         state.share[a] = share_0
-        add_centre(state, plus[1, 0], plus[1, 1], share_1)
+        add_centre(state, bx, by, share_1)
         state.taken[SPLIT] += 1
 
 
 @njit(nogil=True, cache=True)
-def try_merge(data, target, table, state, near, fresh, rng):
+def try_merge(data, target, table, state, work, rng):
     state.tried[MERGE] += 1
     number = state.number[0]
     if number < 2:
@@ -527,22 +439,22 @@ def try_merge(data, target, table, state, near, fresh, rng):
                 break
             pick -= 1
     bx, by = state.centres[b, 0], state.centres[b, 1]
-    plus = np.empty((1, 2))
-    plus[0, 0], plus[0, 1] = 0.5 * (ax + bx), 0.5 * (ay + by)
-    if not is_inside(data.wide, plus[0, 0], plus[0, 1]):
+    x, y = 0.5 * (ax + bx), 0.5 * (ay + by)
+    if not is_inside(data.wide, x, y):
         return
-    count, change = exchange(data, target, state, (a, b), plus, near, fresh)
+    work.rows[0], work.rows[1] = a, b
+    change, _ = exchange(data, target, state, 2, 1, x, y, 0.0, 0.0, work)
     if change == -np.inf:
         return
-    share = share_at(table, plus[0, 0], plus[0, 1], scale)
+    share = share_at(table, x, y, scale)
     exposure = state.scalars[EXPOSURE] - state.share[a] - state.share[b] + share
     n_b = partners(state, bx, by, b, -1, limit)
     forth = (1.0 / n_a + 1.0 / n_b) / number
     back = 2.0 * split_density(0.5 * (ax - bx), 0.5 * (ay - by), scale) / (number - 1) / 4.0
     log_a = change + prior_ratio(data, target, state, -1, exposure) + np.log(back / forth)
     if np.log(rng.random()) < log_a:
-        take(state, near, fresh, count, exposure)
-        state.centres[a, 0], state.centres[a, 1] = plus[0, 0], plus[0, 1]
+        take(data, state, work, exposure)
+        state.centres[a, 0], state.centres[a, 1] = x, y
         state.share[a] = share
         remove_centre(state, b)
         state.taken[MERGE] += 1

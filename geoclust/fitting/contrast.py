@@ -102,11 +102,12 @@ class Contrast:
     exponent: float
     bandwidth: float | None = None
 
-    @property
+    @cached_property
     def _target(self) -> Floats:
-        return np.maximum(self.values, 0.0) ** self.exponent
+        known = np.where(np.isfinite(self.values), self.values, 0.0)
+        return np.asarray(np.maximum(known, 0.0) ** self.exponent)
 
-    @property
+    @cached_property
     def _root_weights(self) -> Floats:
         """Square root of the trapezoid weights, none where the curve is not known."""
         steps = np.gradient(self.radii)
@@ -115,8 +116,7 @@ class Contrast:
 
     def residuals(self, curve: Floats) -> Floats:
         """(..., k) weighted differences of powers between a model's curve and the survey's."""
-        target = np.where(np.isfinite(self.values), self._target, 0.0)
-        return np.asarray(self._root_weights * (np.maximum(curve, 0.0) ** self.exponent - target))
+        return np.asarray(self._root_weights * (np.maximum(curve, 0.0) ** self.exponent - self._target))
 
     def curve_of(self, model: ClusterModel) -> Floats:
         """The model's curve at the radii, as the survey's is expected to come out."""

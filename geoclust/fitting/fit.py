@@ -10,25 +10,28 @@ import numpy as np
 from geoclust.area.survey import Survey
 from geoclust.errors import not_allowed
 from geoclust.fitting.moments import ContrastChoices, fit_by_contrast
+from geoclust.fitting.posterior import fit_by_posterior
 from geoclust.fitting.result import ClusterFit
 from geoclust.models.catalogue import model_by_name
 
 Progress = Callable[[str, int, int], None]
 
-METHODS = ("minimum-contrast",)
+METHODS = ("posterior", "minimum-contrast")
 
 
 def fit_clusters(
     survey: Survey,
     model: str = "thomas",
     *,
-    method: str = "minimum-contrast",
+    method: str = "posterior",
     function: str = "g",
     r_max: float | None = None,
     r_min: float | None = None,
     exponent: float | None = None,
     bandwidth: float | None = None,
     bootstrap: int = 199,
+    background: bool = False,
+    chains: int = 4,
     rng: np.random.Generator | int,
     workers: int | None = None,
     progress: Progress | None = None,
@@ -42,9 +45,10 @@ def fit_clusters(
     model
         Name of the model, such as ``thomas``.
     method
-        ``minimum-contrast`` (Diggle & Gratton 1984).
+        ``posterior`` (centres, memberships and parameters sampled together; Møller &
+        Waagepetersen 2004) or ``minimum-contrast`` (Diggle & Gratton 1984), the quick look.
     function
-        Curve that the contrast is taken on: ``g`` or ``K``.
+        Curve that the contrast is taken on: ``g`` or ``K``. The posterior starts from that fit.
     r_max, r_min
         Range of distances in metres; chosen from a first fit if not given.
     exponent
@@ -52,7 +56,11 @@ def fit_clusters(
     bandwidth
         Half width of the kernel of g, metres; 0.15 mean spacings if not given.
     bootstrap
-        Patterns simulated for the intervals; 0 for none, otherwise at least 39.
+        Patterns simulated for the intervals of the contrast; 0 for none, otherwise at least 39.
+    background
+        Whether points may belong to no cluster (posterior only).
+    chains
+        Chains of the sampler, at least two.
     rng
         Generator or seed; the answer does not depend on `workers`.
     workers, progress
@@ -74,7 +82,17 @@ def fit_clusters(
         raise not_allowed("method", METHODS, method)
     if bootstrap != 0 and bootstrap < 39:
         raise not_allowed("bootstrap", "0 or at least 39", bootstrap)
+    if chains < 2:
+        raise not_allowed("chains", "at least 2, so that they can be compared", chains)
+    if background and method != "posterior":
+        raise not_allowed("background", "false for a contrast fit, which cannot see it", background)
     choices = ContrastChoices(function, r_max, r_min, exponent, bandwidth)
+    if method == "posterior":
+        sampled = fit_by_posterior(
+            survey, kind, choices=choices, background=background, chains=chains,
+            rng=np.random.default_rng(rng), workers=workers, progress=progress,
+        )  # fmt: skip
+        return replace(sampled, seed=rng if isinstance(rng, int) else None)
     found = fit_by_contrast(
         survey, kind, choices=choices, bootstrap=bootstrap, rng=np.random.default_rng(rng),
         workers=workers, progress=progress,

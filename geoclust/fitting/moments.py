@@ -144,7 +144,7 @@ def fit_by_contrast(
         reason = verdicts.sentence("too-few-points", n=survey.n, fewest=verdicts.FEWEST_POINTS)
         raise CannotTell("too-few-points", reason)
     found = fit_points(kind, survey.local_xy, survey.area, choices, workers)
-    p_value = _clustering_p_value(survey, found.r_max, test_seed, workers, progress)
+    p_value = clustering_p_value(survey, found.r_max, test_seed, workers, progress)
     draws = _bootstrap(kind, found.fit.model, survey.area, choices, bootstrap, boot_seed, workers, progress)
     intervals = {
         name: (float(np.quantile(v, 0.025)), float(np.quantile(v, 0.975)))
@@ -153,12 +153,7 @@ def fit_by_contrast(
     }
     status, reason = _verdict(survey, found, p_value, intervals)
     contrast = found.contrast
-    theory = np.ones_like(contrast.radii) if contrast.function == "g" else np.pi * contrast.radii**2
-    curve = Curve(
-        contrast.function, contrast.radii, contrast.values, theory,
-        "1" if contrast.function == "g" else "m²", "isotropic",
-        found.bandwidth if contrast.function == "g" else None,
-    )  # fmt: skip
+    curve, fitted = fitted_curve(found)
     return ClusterFit(
         model=found.fit.model,
         intervals=intervals,
@@ -178,13 +173,29 @@ def fit_by_contrast(
             "clustering_p_value": p_value,
         },
         curve=curve,
-        fitted=contrast.curve_of(found.fit.model),
+        fitted=fitted,
         surface=found.fit.surface,
         draws=draws,
     )
 
 
-def _clustering_p_value(
+def fitted_curve(found: MomentFit) -> tuple[Curve, Floats]:
+    """The curve that was fitted, and the model's values at its radii."""
+    contrast = found.contrast
+    g = contrast.function == "g"
+    curve = Curve(
+        contrast.function,
+        contrast.radii,
+        contrast.values,
+        np.ones_like(contrast.radii) if g else np.pi * contrast.radii**2,
+        "1" if g else "m²",
+        "isotropic",
+        found.bandwidth if g else None,
+    )
+    return curve, contrast.curve_of(found.fit.model)
+
+
+def clustering_p_value(
     survey: Survey, r_max: float, rng: np.random.Generator, workers: int | None, progress: Progress | None
 ) -> float:
     """One-sided test for clustering: extreme rank length of L over the fitted range, 199 simulations."""
@@ -249,12 +260,7 @@ def _verdict(
     clusters = model.parent_intensity * survey.area.area
     if clusters < verdicts.FEWEST_CLUSTERS:
         return _named("few-clusters", clusters=clusters, fewest=verdicts.FEWEST_CLUSTERS)
-    for p in model.described:
-        low, high = intervals.get(p.name, (1.0, 1.0))
-        if high > verdicts.WIDEST_INTERVAL * low:
-            factor, unit = (1e4, "ha⁻¹") if p.per_area else (1.0, p.unit)
-            return _named("flat-valley", names=p.meaning, low=low * factor, high=high * factor, unit=unit)
-    return "ok", ""
+    return verdicts.flat_valley(model, intervals)
 
 
 def _named(status: str, **figures: object) -> tuple[str, str]:

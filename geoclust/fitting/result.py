@@ -9,6 +9,7 @@ import numpy.typing as npt
 
 from geoclust.curves.curve import Curve
 from geoclust.fitting.contrast import ContrastSurface
+from geoclust.fitting.convergence import Sample
 from geoclust.models.base import ClusterModel
 
 Floats = npt.NDArray[np.float64]
@@ -42,6 +43,8 @@ class ClusterFit:
         Bootstrap or posterior draws of each parameter, (m,) each.
     seed
         What the random numbers started from.
+    sample
+        The posterior sample, centres and memberships included; None for moment fits.
     """
 
     model: ClusterModel
@@ -55,6 +58,7 @@ class ClusterFit:
     surface: ContrastSurface | None = None
     draws: dict[str, Floats] = field(default_factory=dict, repr=False)
     seed: int | None = None
+    sample: Sample | None = field(default=None, repr=False)
 
     @property
     def parameters(self) -> dict[str, float]:

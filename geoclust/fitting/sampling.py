@@ -10,7 +10,8 @@ import numpy.typing as npt
 
 from geoclust.area.study_area import StudyArea
 from geoclust.curves._pairs import cell_order
-from geoclust.fitting import _chain, _moves
+from geoclust.fitting import _chain, _kernels, _moves
+from geoclust.fitting._table import share_at
 from geoclust.fitting.shares import share_table
 from geoclust.models.base import ClusterModel
 from geoclust.workers import in_order
@@ -22,6 +23,8 @@ Progress = Callable[[str, int, int], None]
 MOVES = ("birth", "death", "shift", "split", "merge", "scale", "background")
 # moves in one compiled call: well below a second, so that an interrupt is seen
 PORTION = 20_000
+# cells of the points: long rows keep the compiled loops busy, small ones skip points out of reach
+CELL_IN_SCALES = 2.5
 # births proposed anywhere in the widened study area rather than near a point
 UNIFORM_SHARE = 0.15
 
@@ -152,14 +155,15 @@ class Chain:
 
     def _work_arrays(self) -> None:
         n, room = self.setup.n, len(self.state.share)
-        self.near, self.fresh = np.empty(n + 1, np.int64), np.empty(n + 1)
-        self.spare_density, self.spare_share = np.empty(n), np.empty(room)
+        self.work = _moves.Work(
+            np.zeros(2, np.int64), np.zeros(4, np.int64), np.zeros(n), np.zeros(n), np.zeros(room)
+        )
 
     def _first_centres(self, expected: float) -> None:
         """Start from centres near random points, none left uncovered; chains start apart."""
         s, data, rng = self.state, self.setup.data, self.rng
         reach = 0.7 * self.setup.reach * s.scalars[_moves.SCALE]
-        if self.setup.target.kernel == _moves.DISC:
+        if self.setup.target.kernel == _kernels.DISC:
             reach = 0.9 * s.scalars[_moves.SCALE]
         count = int(rng.poisson(expected))
         places = []
@@ -194,8 +198,8 @@ class Chain:
         left = moves
         while left > 0:
             done = _chain.run(
-                self.setup.data, self.setup.target, self.setup.table, self.state, self.near, self.fresh,
-                self.spare_density, self.spare_share, min(left, PORTION), every, self.walk, self.rng,
+                self.setup.data, self.setup.target, self.setup.table, self.state, self.work,
+                min(left, PORTION), every, self.walk, self.rng,
             )  # fmt: skip
             left -= done
             if self.state.number[0] > len(self.state.share) - 2:
@@ -223,7 +227,7 @@ class Chain:
         """Keep the present state, with memberships drawn."""
         s = self.state
         owner = np.empty(self.setup.n, np.int32)
-        _chain.draw_members(self.setup.data, self.setup.target, s, owner, self.spare_density, self.rng)
+        _chain.draw_members(self.setup.data, self.setup.target, s, owner, self.work.density, self.rng)
         back = np.empty_like(owner)
         back[self.setup.order] = owner
         number = int(s.number[0])
@@ -263,7 +267,7 @@ def _sorted_data(
     n = len(x)
     left, bottom = (float(x.min()), float(y.min())) if n else (0.0, 0.0)
     width, height = (float(np.ptp(x)), float(np.ptp(y))) if n else (0.0, 0.0)
-    cell = max(1.5 * scale, np.sqrt(width * height / (n + 16.0)), 1e-9)
+    cell = max(CELL_IN_SCALES * scale, np.sqrt(width * height / (n + 16.0)), 1e-9)
     columns, rows = int(width / cell) + 1, int(height / cell) + 1
     order, first = cell_order(x, y, left, bottom, cell, columns, rows)
     shift = wide.origin - area.origin
@@ -319,7 +323,7 @@ def collect(setup: ChainSetup, chains: list[Chain], rng: np.random.Generator) ->
 
 def _exposure(setup: ChainSetup, record: tuple[Floats, float, float, Ints]) -> float:
     centres, scale, _, _ = record
-    return float(sum(_moves.share_at(setup.table, x, y, scale) for x, y in centres))
+    return float(sum(share_at(setup.table, x, y, scale) for x, y in centres))
 
 
 def run_chains(

@@ -6,7 +6,7 @@ import numpy as np
 import numpy.typing as npt
 
 from geoclust.area.study_area import StudyArea
-from geoclust.fitting._moves import ShareTable
+from geoclust.fitting._table import ShareTable
 from geoclust.models.base import ClusterModel
 from geoclust.workers import in_order
 

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from geoclust.models.base import ClusterModel
+
 # fewer points than this carry no answer about clusters (common practice)
 FEWEST_POINTS = 20
 # fewer clusters than about ten in the study area give no usable spread of sizes and distances
@@ -36,6 +38,17 @@ REASONS: dict[str, str] = {
         "{low:.3g} to {high:.3g} {unit}."
     ),
 }
+
+
+def flat_valley(model: ClusterModel, intervals: dict[str, tuple[float, float]]) -> tuple[str, str]:
+    """Status and sentence if an interval is too wide to be an answer; otherwise ``ok``."""
+    for p in model.described:
+        low, high = intervals.get(p.name, (1.0, 1.0))
+        if high > WIDEST_INTERVAL * low:
+            factor, unit = (1e4, "ha⁻¹") if p.per_area else (1.0, "" if p.unit == "1" else p.unit)
+            figures = {"names": p.meaning, "low": low * factor, "high": high * factor, "unit": unit}
+            return "flat-valley", sentence("flat-valley", **figures)
+    return "ok", ""
 
 
 def sentence(status: str, **figures: object) -> str:

@@ -49,8 +49,8 @@ class Thomas(ClusterModel):
 
     scale_name: ClassVar[str] = "sigma"
     kernel_code: ClassVar[int] = 0
-    # beyond six sigma lie 1.5e-8 of the offspring
-    reach_in_scales: ClassVar[float] = 6.0
+    # beyond five sigma lie 4e-6 of the offspring
+    reach_in_scales: ClassVar[float] = 5.0
     # beyond 4.5 sigma lie 4e-5 of them
     margin_in_scales: ClassVar[float] = 4.5
 
