@@ -197,6 +197,13 @@ def beyond(radii: Floats) -> float:
 
 def sorted_points(local_xy: Floats, per_cell: float = 2.0) -> _nearest.CellPoints:
     """Points in the order of square cells with a few points each."""
+    return sorted_with_order(local_xy, per_cell)[0]
+
+
+def sorted_with_order(
+    local_xy: Floats, per_cell: float = 2.0
+) -> tuple[_nearest.CellPoints, npt.NDArray[np.int32]]:
+    """Points in the order of square cells, and the row that each of them came from."""
     x, y = np.ascontiguousarray(local_xy[:, 0]), np.ascontiguousarray(local_xy[:, 1])
     n = len(x)
     left, bottom = (float(x.min()), float(y.min())) if n else (0.0, 0.0)
@@ -205,7 +212,8 @@ def sorted_points(local_xy: Floats, per_cell: float = 2.0) -> _nearest.CellPoint
     cell = max(np.sqrt(width * height * per_cell / max(n, 1)), max(width, height) / max(n, 1), 1e-9)
     columns, rows = int(width / cell) + 1, int(height / cell) + 1
     order, first = _pairs.cell_order(x, y, left, bottom, cell, columns, rows)
-    return _nearest.CellPoints(x[order], y[order], first, left, bottom, float(cell), columns, rows)
+    points = _nearest.CellPoints(x[order], y[order], first, left, bottom, float(cell), columns, rows)
+    return points, order
 
 
 def neighbour_distances(local_xy: Floats) -> Floats:

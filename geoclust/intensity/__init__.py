@@ -1,0 +1,1 @@
+"""First order: constant, log-linear on covariates, and kernel intensity."""
