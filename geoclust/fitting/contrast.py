@@ -23,6 +23,8 @@ FUNCTIONS = ("g", "K")
 EXPONENTS = {"K": 0.25, "g": 0.5}
 # nodes of the contrast surface in parent intensity and scale
 SURFACE = (61, 61)
+# valleys of the surface that are searched, the deepest first
+STARTS = 6
 # smallest scale searched, as a part of the bandwidth of g
 NARROWEST = 50.0
 # nodes of the integral over the kernel of g, crowded towards its lower end
@@ -160,7 +162,7 @@ def fit_contrast(
     """Fit a model with one scale parameter by minimum contrast.
 
     The surface over parent intensity and scale is computed first; every local
-    minimum of it, at most four, is the start of a least-squares search in
+    minimum of it, at most six, is the start of a least-squares search in
     logarithms.
 
     Parameters
@@ -196,7 +198,7 @@ def fit_contrast(
         grid[:, b] = np.sum(contrast.residuals(base + excess / np.exp(rhos)[:, None]) ** 2, axis=1)
 
     best: tuple[float, Floats] | None = None
-    for a, b in _valleys(grid)[:4]:
+    for a, b in _valleys(grid)[:STARTS]:
         found = least_squares(
             residuals, np.array([rhos[a], scales[b]]), bounds=(low, high), xtol=1e-10, ftol=1e-12
         )
@@ -214,14 +216,16 @@ def fit_contrast(
 
 
 def _valleys(grid: Floats) -> list[tuple[int, int]]:
-    """Local minima of a surface, the deepest first."""
-    padded = np.pad(grid, 1, constant_values=np.inf)
+    """Places of a surface that are lowest within two nodes, the deepest first.
+
+    One node would be too near: in a slanting ravine every few nodes look like a minimum.
+    """
+    padded = np.pad(grid, 2, constant_values=np.inf)
     least = np.ones(grid.shape, dtype=bool)
     rows, columns = grid.shape
-    for i in range(3):
-        for j in range(3):
-            if (i, j) != (1, 1):
-                least &= grid <= padded[i : i + rows, j : j + columns]
+    for i in range(5):
+        for j in range(5):
+            least &= grid <= padded[i : i + rows, j : j + columns]
     found = np.argwhere(least)
     order = np.argsort(grid[least])
     return [(int(a), int(b)) for a, b in found[order]]
