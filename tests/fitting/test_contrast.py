@@ -90,7 +90,7 @@ def test_several_starts_find_the_deeper_of_two_valleys():
         return float(np.sum(contrast.residuals(contrast.curve_of(model)) ** 2))
 
     limits = [tuple(np.log(found.bounds[n])) for n in ("parent_intensity", "sigma")]
-    best = differential_evolution(value, limits, seed=1, tol=1e-10, popsize=20)
+    best = differential_evolution(value, limits, seed=1, tol=1e-10, popsize=40, maxiter=300)
     assert found.value == pytest.approx(best.fun, rel=1e-6)
     # negative control: a single start in the shallower valley stays there
     valleys = _valleys(found.surface.contrast)
