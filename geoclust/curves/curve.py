@@ -39,6 +39,10 @@ class Curve:
         (k,) limits, where there are any.
     interval
         What the limits are, in words.
+    bandwidth_by
+        How the bandwidth was chosen, in words.
+    intensity
+        What the pairs are weighted by, in words; None where the intensity is taken as constant.
     """
 
     function: str
@@ -51,11 +55,16 @@ class Curve:
     lower: Floats | None = None
     upper: Floats | None = None
     interval: str | None = None
+    bandwidth_by: str | None = None
+    intensity: str | None = None
 
     def __repr__(self) -> str:
         parts = [f"{len(self.radii)} radii to {self.radii[-1]:.4g} m", _boundary(self.edge_weight)]
         if self.bandwidth is not None:
-            parts.append(f"bandwidth {self.bandwidth:.4g} m")
+            chosen = "" if self.bandwidth_by is None else f" ({self.bandwidth_by})"
+            parts.append(f"bandwidth {self.bandwidth:.4g} m{chosen}")
+        if self.intensity is not None:
+            parts.append(f"weighted by the intensity: {self.intensity}")
         if self.interval is not None:
             parts.append(self.interval)
         return f"<Curve {self.function}(r) in {self.unit}: {', '.join(parts)}>"
