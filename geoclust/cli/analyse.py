@@ -43,10 +43,12 @@ def analyse(
     zone_file, zone_layer = file_and_layer(zones, zones_layer, area, "--zones")
     beyond_file, beyond_layer = file_and_layer(unsurveyed, unsurveyed_layer, area, "--unsurveyed")
     with Talk(quiet) as talk:
+        used = chosen_seed(seed)
         found = workflow.analyse(
             points, area, zones=zone_file, zones_layer=zone_layer, unsurveyed=beyond_file,
-            unsurveyed_layer=beyond_layer, seed=chosen_seed(seed, talk), progress=talk.progress,
+            unsurveyed_layer=beyond_layer, seed=used, progress=talk.progress,
             command=shlex.join(["geoclust", *given]), **options,
         )  # fmt: skip
+        talk.say(f"seed {used}")
         click.echo("\n".join(found.lines()))
         return 0 if found.status == "ok" else CannotTell.exit_status

@@ -48,12 +48,13 @@ def describe(
 
     with Talk(quiet) as talk:
         survey = workflow.read_survey(points, area, **reading)
+        used = chosen_seed(seed)
         radii = default_radii(survey.area)
         if r_max is not None:
             radii = radii * (r_max / radii[-1])
         tests = randomness_envelopes(
             survey, radii, simulations=simulations, bandwidth=bandwidth,
-            rng=stream(chosen_seed(seed, talk), "curves"), workers=workers, progress=talk.progress,
+            rng=stream(used, "curves"), workers=workers, progress=talk.progress,
         )  # fmt: skip
         table = workflow.curve_table(tests, None, survey).to_csv(index=False)
         if figures is not None:
@@ -62,3 +63,4 @@ def describe(
         put(table, out, overwrite)
         for name, test in tests.items():
             talk.say(f"complete randomness by {name}: p = {test.p_value:.3g}")
+        talk.say(f"seed {used}")

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import logging
-import os
 import signal
 import sys
 import warnings
@@ -17,12 +16,12 @@ from geoclust.cli.audit import audit
 from geoclust.cli.describe import describe
 from geoclust.cli.fit import fit
 from geoclust.cli.locate import locate
+from geoclust.cli.options import as_typed
 from geoclust.cli.simulate import simulate
 from geoclust.errors import GeoclustError
 from geoclust.version import __version__
 
 INTERRUPTED = 128 + signal.SIGINT
-_BROKEN_PIPE = 141
 
 
 class _InOrder(click.Group):
@@ -32,11 +31,16 @@ class _InOrder(click.Group):
         return list(self.commands)
 
 
-@click.group(cls=_InOrder, context_settings={"help_option_names": ["--help"], "max_content_width": 100})
+@click.group(
+    cls=_InOrder,
+    no_args_is_help=False,
+    invoke_without_command=True,
+    context_settings={"help_option_names": ["--help"], "max_content_width": 100},
+)
 @click.version_option(__version__, prog_name="geoclust", message="%(prog)s %(version)s")
 @click.option("--traceback", is_flag=True, help="Show where in the program an unexpected error came up.")
 @click.pass_context
-def cli(ctx: click.Context, traceback: bool) -> None:
+def cli(ctx: click.Context, traceback: bool) -> int:
     """Find clusters in a mapped field survey: how many, how large, how sure, and where.
 
     POINTS holds the mapped individuals, AREA the study area in which every one of them was looked for; both
@@ -44,6 +48,10 @@ def cli(ctx: click.Context, traceback: bool) -> None:
 
     Exit status: 0 done, 1 failed, 2 wrong usage, 3 done, but the data cannot tell.
     """
+    if ctx.invoked_subcommand is not None:
+        return 0
+    click.echo(ctx.get_help(), err=True)
+    return click.UsageError.exit_code
 
 
 for _command in (audit, describe, fit, locate, simulate, analyse):
@@ -63,15 +71,11 @@ def run(arguments: Sequence[str]) -> int:
         _tell(error.format_message())
         return error.exit_code
     except GeoclustError as error:
-        _tell(str(error))
+        _tell(as_typed(str(error)))
         return error.exit_status
     except (KeyboardInterrupt, click.Abort):
         _tell("interrupted; nothing was written.")
         return INTERRUPTED
-    except BrokenPipeError:
-        # the reader of stdout has gone; Python must not complain about it again at its end
-        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
-        return _BROKEN_PIPE
     return status if isinstance(status, int) else 0
 
 

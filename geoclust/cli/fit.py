@@ -16,13 +16,17 @@ from geoclust.errors import CannotTell
 
 @click.command(short_help="Fit a cluster model: how large, how many, how sure.")
 @survey_arguments
-@takes(*READING, "model", "function", "r_min", "r_max", "exponent", "bandwidth", "bootstrap", "json")
+@takes(*READING, "model", "method", "background", "chains", "function", "r_min", "r_max", "exponent")
+@takes("bandwidth", "bootstrap", "json")
 @out_option("Write the fit as JSON to this file, for --fit of locate and simulate.")
 @takes("seed", "overwrite", *RUNNING)
 def fit(
     points: Path,
     area: Path,
     model: str,
+    method: str,
+    background: bool,
+    chains: int,
     json: bool,
     out: Path | None,
     seed: int | None,
@@ -37,7 +41,7 @@ def fit(
     bootstrap: int,
     **reading: Any,
 ) -> int:
-    """Fit a cluster model by minimum contrast, with 95 % intervals by parametric bootstrap.
+    """Fit a cluster model, with 95 % intervals and a verdict whether the data can tell.
 
     Prints parameters with units as text, or everything as JSON with --json. Exit status 3: the data cannot
     tell.
@@ -50,12 +54,13 @@ def fit(
 
     with Talk(quiet) as talk:
         survey = workflow.read_survey(points, area, **reading)
-        used = chosen_seed(seed, talk)
+        used = chosen_seed(seed)
         found, status, reason = None, "ok", ""
         try:
             found = fit_clusters(
-                survey, model, function=function, r_min=r_min, r_max=r_max, exponent=exponent,
-                bandwidth=bandwidth, bootstrap=bootstrap, rng=stream(used, "fit"), workers=workers,
+                survey, model, method=method, background=background, chains=chains, function=function,
+                r_min=r_min, r_max=r_max, exponent=exponent, bandwidth=bandwidth, bootstrap=bootstrap,
+                rng=stream(used, "fit"), workers=workers,
                 progress=talk.progress,
             )  # fmt: skip
             status, reason = found.status, found.reason
@@ -71,6 +76,7 @@ def fit(
             put(as_json(record), None)
         elif status == "ok" and found is not None:
             put("\n".join(text_lines(found, survey)), None)
+        talk.say(f"seed {used}")
         if status != "ok":
             talk.say(f"cannot tell ({status}): {reason}")
         return 0 if status == "ok" else CannotTell.exit_status

@@ -45,11 +45,12 @@ def locate(
     zone_file, zone_layer = file_and_layer(zones, zones_layer, area, "--zones")
     beyond_file, beyond_layer = file_and_layer(unsurveyed, unsurveyed_layer, area, "--unsurveyed")
     with Talk(quiet) as talk:
-        used = chosen_seed(seed, talk)
+        used = chosen_seed(seed)
         found = steps.locate(
             points, area, out=out, fit_file=fit, model=model, zones=zone_file, zones_layer=zone_layer,
             unsurveyed=beyond_file, unsurveyed_layer=beyond_layer, like=like, cell=cell, seed=used,
             overwrite=overwrite, workers=workers, progress=talk.progress, **reading,
         )  # fmt: skip
+        talk.say(f"seed {used}")
         click.echo("\n".join(found.lines()))
         return 0

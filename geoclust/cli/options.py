@@ -6,6 +6,7 @@ wherever an option turns up.
 
 from __future__ import annotations
 
+import re
 from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
@@ -106,6 +107,11 @@ _DECLARED = (
            metavar="NAME"),
     Option("--simulations", "Random patterns for the envelopes, at least 39.", default=999,
            kind=click.IntRange(min=39), metavar="COUNT"),
+    Option("--method", "Way of fitting: posterior, or minimum-contrast for a quick look.",
+           default="posterior", kind=str, metavar="NAME"),
+    Option("--background", "Points may belong to no cluster (posterior only)."),
+    Option("--chains", "Chains of the sampler, at least 2.", default=4, kind=click.IntRange(min=2),
+           metavar="COUNT"),
     Option("--function", "Curve to fit the model on.", default="g", kind=click.Choice(["g", "K"])),
     Option("--r-min", "Smallest distance to use, metres.", kind=click.FloatRange(min=0), metavar="METRES",
            otherwise="the bandwidth for g, 0 for K"),
@@ -140,6 +146,32 @@ _DECLARED = (
 )  # fmt: skip
 
 OPTIONS: dict[str, Option] = {option.name: option for option in _DECLARED}
+
+# where a message names an argument of a function, the person typed an option
+_AS_ARGUMENT = re.compile(
+    r"(?<![\w/.'-])(?:("
+    + "|".join(name for name in OPTIONS if "_" in name)
+    + r")|(?<=with )(repair)\b|(?<=pass )(overwrite|repair)|(?<=leave )(crs)(?= out)"
+    + r"|^("
+    + "|".join(name for name in OPTIONS if "_" not in name)
+    + r")(?= (?:must be|is for)))(?![\w/'-]|\.\w)"
+)
+
+
+def as_typed(message: str) -> str:
+    """A message with the options that it names as they are typed.
+
+    Examples
+    --------
+    >>> as_typed("cell must be a positive number of metres; got -1.0")
+    '--cell must be a positive number of metres; got -1.0'
+    >>> as_typed("state the column with x_column (easting), or pass overwrite")
+    'state the column with --x-column (easting), or pass --overwrite'
+    >>> as_typed("there is no file area_layer.gpkg")
+    'there is no file area_layer.gpkg'
+    """
+    return _AS_ARGUMENT.sub(lambda match: "--" + match[0].replace("_", "-"), message)
+
 
 READING = ("points_layer", "area_layer", "crs", "x_column", "y_column", "metric_crs", "repair")
 PLACES = ("zones", "zones_layer", "unsurveyed", "unsurveyed_layer")

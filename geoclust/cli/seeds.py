@@ -1,16 +1,10 @@
-"""The seed of a command: as given, or drawn and told."""
+"""The seed of a command: as given, or drawn."""
 
 from __future__ import annotations
 
 import secrets
 
-from geoclust.cli.talk import Talk
 
-
-def chosen_seed(seed: int | None, talk: Talk) -> int:
-    """The seed as given, or one drawn and told, so that the run can be repeated."""
-    if seed is not None:
-        return seed
-    drawn = secrets.randbits(32)
-    talk.say(f"seed {drawn}")
-    return drawn
+def chosen_seed(seed: int | None) -> int:
+    """The seed as given, or one drawn; commands tell it in the end, so that a run can be repeated."""
+    return secrets.randbits(32) if seed is None else seed

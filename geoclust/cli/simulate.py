@@ -43,12 +43,13 @@ def simulate(
     if sum((bool(parameter), fit is not None, random)) > 1:
         raise UsageError("Give one of --parameter, --fit and --random: each says by itself what to simulate.")
     with Talk(quiet) as talk:
+        used = chosen_seed(seed)
         written = steps.simulate(
             points, area, out=out, count=count, model=model, parameters=_values(parameter),
-            fit_file=fit, random=random, seed=chosen_seed(seed, talk), overwrite=overwrite, workers=workers,
+            fit_file=fit, random=random, seed=used, overwrite=overwrite, workers=workers,
             progress=talk.progress, **reading,
         )  # fmt: skip
-        talk.say(f"{written:,} points in {count:,} patterns in {out}")
+        talk.say(f"{written:,} points in {count:,} patterns in {out}, seed {used}")
         return 0
 
 

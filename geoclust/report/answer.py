@@ -56,6 +56,11 @@ ADVICE: dict[str, tuple[str, ...]] = {
         "Single clusters may well be plain to see on the map of the points; what cannot be told is the rule "
         "behind them.",
     ),
+    "not-converged": (
+        "Run it again with another seed (--seed); if that does not help either, the model does not suit the "
+        "pattern.",
+        "If the density plainly drifts across the area, analyse parts of it that are alike.",
+    ),
     "flat-valley": (
         "Look at the figure of the contrast: every place in the long valley fits about equally well.",
         "More points, or a larger study area, narrow it down.",
@@ -232,8 +237,14 @@ def _count(survey: Survey, fit: ClusterFit, centres: CentreMap | None) -> str:
     mean, low, high = centres.interval_inside()
     return (
         f"{text}. In the study area of {hectares} ha that makes **{words.whole(mean)}** centres "
-        f"(95 % interval {words.counts_between(low, high)}, if size and density of clusters are as fitted)."
+        f"(95 % interval {words.counts_between(low, high)}{given(fit)})."
     )
+
+
+def given(fit: ClusterFit) -> str:
+    """The condition under which numbers of centres hold, as a clause: none if parameters were sampled with "
+    "them."""
+    return "" if fit.sample is not None else ", if size and density of clusters are as fitted"
 
 
 def _where(centres: CentreMap) -> str:

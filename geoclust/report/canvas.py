@@ -58,6 +58,8 @@ _LOOK: Any = {
     "legend.frameon": False,
     "legend.fontsize": 9,
     "axes.unicode_minus": True,
+    # names of zones are no formulas, whatever signs they hold
+    "text.parse_math": False,
     # text stays text: small files, and the type of the reader's machine
     "svg.fonttype": "none",
     # the same results give the same file

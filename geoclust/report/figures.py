@@ -52,7 +52,12 @@ def curve_figure(test: EnvelopeTest, *, fit: ClusterFit | None = None) -> Figure
         if fit is not None:
             modelled = {"L": fit.model.l_function, "g": fit.model.pair_correlation, "K": fit.model.k_function}
             ax.plot(
-                r, modelled[curve.function](r) - off, color=canvas.UNSURE, lw=2.2, label="fitted clusters"
+                r,
+                modelled[curve.function](r) - off,
+                color=canvas.UNSURE,
+                lw=2.2,
+                ls=(0, (5, 1.2)),
+                label="fitted clusters",
             )
         ax.plot(r, curve.values - off, color=canvas.CLUSTER, lw=1.6, label="survey")
         name = "L(r) − r (m)" if curve.function == "L" else f"{curve.function}(r)"
@@ -73,8 +78,9 @@ def contrast_figure(fit: ClusterFit) -> Figure | None:
     surface = fit.surface
     if surface is None:
         return None
-    rho, scales, ratio = _fine(surface)
-    scale = fit.parameters[surface.scale_name]
+    best = np.array([fit.parameters["parent_intensity"] * 1e4, fit.parameters[surface.scale_name]])
+    cloud = _draws(fit, surface.scale_name)
+    rho, scales, ratio = _fine(surface, np.vstack([best, cloud]))
     with canvas.look():
         figure, ax = _axes()
         top = min(max(float(np.nanmax(ratio)), 2.0), 32.0)
@@ -85,8 +91,9 @@ def contrast_figure(fit: ClusterFit) -> Figure | None:
         widths = [2.0 if level == VALLEY else 0.8 for level in lines]
         drawn = ax.contour(rho, scales, ratio.T, levels=lines, colors="white", linewidths=widths)
         ax.clabel(drawn, levels=lines[1:], fmt=lambda v: f"× {v:g}", fontsize=8)
-        ax.plot(fit.parameters["parent_intensity"] * 1e4, scale, marker="o", ms=8, mfc=canvas.UNSURE,
-                mec="white",                mew=1.4, ls="none", label="best fit")  # fmt: skip
+        if len(cloud):
+            ax.plot(*cloud.T, ".", ms=3, mfc="white", mec=canvas.INK, mew=0.3, label="draws of the posterior")
+        ax.plot(*best, "o", ms=8, mfc=canvas.UNSURE, mec="white", mew=1.4, label="estimate")
         ax.set_xscale("log")
         ax.set_yscale("log")
         ax.set_xlim(rho[0], rho[-1])
@@ -173,22 +180,35 @@ def _span(*curves: Floats) -> tuple[float, float]:
     return low - 0.05 * height, high + 0.12 * height
 
 
-def _fine(surface: ContrastSurface) -> tuple[Floats, Floats, Floats]:
-    """The part of the surface round its valley, interpolated: ha⁻¹ (a,), m (b,), contrast / least (a, b)."""
+def _draws(fit: ClusterFit, scale_name: str, most: int = 400) -> Floats:
+    """Up to `most` posterior draws, (k, 2): centres per hectare and scale."""
+    if fit.sample is None:
+        return np.empty((0, 2))
+    both = np.column_stack([fit.draws["parent_intensity"] * 1e4, fit.draws[scale_name]])
+    return both[:: max(1, int(np.ceil(len(both) / most)))]
+
+
+def _fine(surface: ContrastSurface, shown: Floats) -> tuple[Floats, Floats, Floats]:
+    """The part of the surface with its valley and all that is `shown`, interpolated.
+
+    Returns centres per hectare (a,), scale in metres (b,), contrast in units of the least (a, b).
+    """
     x, y = np.log(surface.parent_intensities * 1e4), np.log(surface.scales)
     height = np.log(np.maximum(surface.contrast, 1e-300))
     low = height < height.min() + np.log(4.0)
     smooth = RectBivariateSpline(x, y, height)
-    across, up = (np.linspace(*_window(v, low.any(axis=k)), 181) for v, k in ((x, 1), (y, 0)))
+    across, up = (
+        np.linspace(*_window(v, low.any(axis=k), np.log(shown[:, 1 - k])), 181) for v, k in ((x, 1), (y, 0))
+    )
     fine = smooth(across, up)
     # between the nodes a spline may dip below its lowest node: that is the least then
     least = min(float(fine.min()), float(height.min()))
     return np.exp(across), np.exp(up), np.exp(fine - least)
 
 
-def _window(values: Floats, low: np.ndarray) -> tuple[float, float]:
-    """The part of an axis where the contrast is low, with half as much again on either side."""
-    inside = values[low]
+def _window(values: Floats, low: np.ndarray, also: Floats) -> tuple[float, float]:
+    """The part of an axis where the contrast is low or something is shown, with some room on either side."""
+    inside = np.concatenate([values[low], also])
     wide = max(float(inside.max() - inside.min()), 1.0)
     return max(float(values[0]), inside.min() - 0.4 * wide), min(float(values[-1]), inside.max() + 0.4 * wide)
 

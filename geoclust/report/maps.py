@@ -282,11 +282,9 @@ def _draw_raster(sheet: _Sheet, centres: CentreMap, survey: Survey, places: Floa
     if here is not None and not here.equals(centres.grid.crs, ignore_axis_order=True):
         (west, east), (south, north) = limits
         places = _seen_from(here, limits, centres, places)
-    colours = canvas.RAMP_COLOURS.copy()
-    colours.set_bad((1, 1, 1, 0))
     sheet.map.imshow(
-        np.ma.masked_invalid(places), extent=(west, east, south, north), origin="upper", cmap=colours,
-        vmin=0.0, vmax=1.0, interpolation="nearest", zorder=1.0, aspect="equal",
+        np.ma.masked_invalid(places), extent=(west, east, south, north), origin="upper",
+        cmap=canvas.RAMP_COLOURS, vmin=0.0, vmax=1.0, interpolation="nearest", zorder=1.0, aspect="equal",
     )  # fmt: skip
     sheet.map.set_xlim(limits[0])
     sheet.map.set_ylim(limits[1])

@@ -55,6 +55,28 @@ _CONTRAST = Step(
     ("D(θ) = ∫ |T̂(r)^q − T(r; θ)^q|² dr",),
     "Diggle & Gratton 1984",
 )
+_POSTERIOR = Step(
+    "Fit",
+    "Centres, the membership of the points and the parameters are sampled together, in proportion to their "
+    "posterior probability: centres are born, die, move, split and merge; intensities are drawn from their "
+    "Gamma "
+    "conditionals, the spread by a step of its own. A minimum contrast fit gives the values to start from. "
+    "Estimates "
+    "are posterior medians, intervals the middle 95 % of the draws; the priors are listed among the choices "
+    "of the fit. "
+    "The expected share of each cluster that falls into the study area is exact.",
+    ("C ~ Poisson(ρ) on W widened;  X | C ~ Poisson(ε + μ Σ k(x − c)) on W",),
+    "Møller & Waagepetersen 2004; van Lieshout & Baddeley 2002; Diggle & Gratton 1984; Geyer & Møller 1994; "
+    "Green 1995",
+)
+_SAMPLED = Step(
+    "Centres",
+    "The maps and numbers are averages over the same posterior sample; their intervals hold the uncertainty "
+    "of the "
+    "parameters as well.",
+    (),
+    "Møller & Waagepetersen 2004",
+)
 _CENTRES = Step(
     "Centres",
     "Given the fitted parameters, configurations of centres inside the study area and round it are sampled "
@@ -84,7 +106,7 @@ _AGREE = Step(
     "Vehtari et al. 2021",
 )
 
-_FITS = {"minimum-contrast": _CONTRAST}
+_FITS = {"minimum-contrast": _CONTRAST, "posterior": _POSTERIOR}
 
 _MODELS: dict[str, tuple[str, tuple[str, ...]]] = {
     "thomas": (
@@ -111,7 +133,8 @@ def steps(fit: ClusterFit | None, located: bool) -> list[Step]:
         if fit.method in _FITS:
             out.append(_FITS[fit.method])
     if located:
-        out += [_CENTRES, _CLUSTERS, _AGREE]
+        together = fit is not None and fit.sample is not None
+        out += [_SAMPLED if together else _CENTRES, _CLUSTERS, _AGREE]
     return out
 
 

@@ -243,7 +243,7 @@ def _charts(
     }
     for name, test in (envelopes or {}).items():
         if name in readings:
-            modelled = "; the golden line is the fitted model" if ok else ""
+            modelled = "; the golden broken line is the fitted model" if ok else ""
             reading = (
                 readings[name].rstrip(".")
                 + f"{modelled} ({test.level * 100:g} % of random patterns stay inside the band everywhere)."
@@ -253,18 +253,18 @@ def _charts(
     if fit is not None:
         surface = figures.contrast_figure(fit)
         if surface is not None:
-            best = "the dot is the best fit" if ok else "the dot is where the search ended"
-            found.append(
-                pictures.take(
-                    surface,
-                    "Contour plot of the contrast over cluster centres per hectare and size of a cluster.",
-                    f"How well the data fix the fit: {best}, and any other place inside the bold line fits "
-                    "nearly as "
-                    "well (contrast up to 1.25 times the least), so a long dark valley means that they "
-                    "cannot be told "
-                    "apart.",
-                )
+            reading = (
+                "How well the data fix the answer: the golden dot is "
+                + ("the estimate" if ok else "where the search ended")
+                + ", any other place inside the bold line fits the curve nearly as well (contrast up to 1.25 "
+                "times the least), and a long dark valley means that few wide and many narrow clusters "
+                "cannot be told "
+                "apart by it"
             )
+            if fit.sample is not None:
+                reading += "; the small dots are draws from the posterior, which uses more than the curve"
+            alt = "Contour plot of the contrast over cluster centres per hectare and size of a cluster."
+            found.append(pictures.take(surface, alt, reading + "."))
     if centres is not None:
         mean, low, high = centres.interval_inside()
         found.append(
@@ -273,8 +273,7 @@ def _charts(
                 f"Histogram of the number of centres inside: mean {mean:.1f}, 95 % interval {low:.0f} to "
                 f"{high:.0f}.",
                 "How many centres: the higher a bar, the more probable is that number of cluster centres in "
-                "the study "
-                "area, if the parameters are as fitted.",
+                f"the study area{answer.given(fit) if fit is not None else ''}.",
             )
         )
         if centres.zones is not None and len(centres.zones) > 1:

@@ -43,7 +43,7 @@ def read_fit(path: str | Path, survey: Survey) -> ClusterFit:
         raise CannotTell(str(record["status"]), f"The fit in {path} has no answer: {record['reason']}")
     model, intervals = _model(path, record)
     choices = record["choices"].get("fit")
-    if not isinstance(choices, dict) or not {"function", "r_min_m", "r_max_m"} <= set(choices):
+    if not isinstance(choices, dict) or not isinstance(choices.get("r_max_m"), int | float):
         raise InputError(f"{path} does not say how the fit was made; make it again with geoclust fit.")
     curve = _curve(survey, choices)
     fitted = model.pair_correlation(curve.radii) if curve.function == "g" else model.k_function(curve.radii)
@@ -97,8 +97,9 @@ def _model(path: str | Path, record: dict[str, Any]) -> tuple[ClusterModel, dict
 
 
 def _curve(survey: Survey, choices: dict[str, Any]) -> Curve:
-    radii = np.linspace(float(choices["r_min_m"]), float(choices["r_max_m"]), _RADII)
+    """The survey's curve over the range of the fit."""
+    g = choices.get("function", choices.get("pilot_function", "g")) == "g"
+    width = choices.get("bandwidth_m") if g else None
+    radii = np.linspace(choices.get("r_min_m", width or 0.0), choices["r_max_m"], _RADII)
     radii = radii[radii > 0]
-    if choices["function"] == "g":
-        return pair_correlation(survey, radii, bandwidth=choices.get("bandwidth_m"))
-    return k_function(survey, radii)
+    return pair_correlation(survey, radii, bandwidth=width) if g else k_function(survey, radii)

@@ -10,7 +10,7 @@ import numpy as np
 import pandas as pd
 
 from geoclust.report import words
-from geoclust.report.answer import radius_holding
+from geoclust.report.answer import given, radius_holding
 
 if TYPE_CHECKING:
     import geopandas as gpd
@@ -50,8 +50,8 @@ def parameter_table(fit: ClusterFit, survey: Survey, centres: CentreMap | None) 
         rows.append((f"radius of {text}", words.number(radius), _limits(limits), "m", meaning))
     if centres is not None:
         mean, low, high = centres.interval_inside()
-        given = "cluster centres inside the study area, the parameters above being as fitted"
-        rows.append(("centres inside", words.number(mean), words.counts_between(low, high), "", given))
+        meaning = f"cluster centres inside the study area{given(fit)}"
+        rows.append(("centres inside", words.number(mean), words.counts_between(low, high), "", meaning))
     intensity = words.per_hectare(survey.intensity)
     rows.append(("intensity λ", words.number(intensity), "counted", "ha⁻¹", "mapped points per hectare"))
     header = ("parameter", "estimate", "95 % interval", "unit", "meaning")
@@ -111,33 +111,34 @@ _CHOICE_NAMES = {
     "edge_weight": "edge weight",
     "model": "cluster model",
     "simulations": "random patterns for the envelopes",
-    "r_max_m": "largest distance studied",
+    "r_max_m": "largest distance",
     "bandwidth_m": "bandwidth of g (half width of the kernel)",
     "seed": "seed of the random numbers",
     "function": "curve that the model was fitted on",
     "exponent": "power of the curve, q",
-    "r_min_m": "smallest distance fitted",
+    "r_min_m": "smallest distance",
     "range_chosen_by": "range of the fit chosen by",
     "contrast": "contrast at the minimum",
     "bootstrap": "patterns for the intervals (parametric bootstrap)",
+    "pilot": "values to start from",
+    "pilot_function": "curve that they were fitted on",
+    "background": "points may belong to no cluster",
+    "acceptance": "moves accepted",
+    "r_hat": "R̂",
+    "margin_m": "centres looked for outside the study area, up to",
     "clustering_p_value": "p of the one-sided test for clustering over the fitted range",
 }
 
 
-def choice_rows(choices: Mapping[str, object]) -> list[tuple[str, str]]:
-    """Choices by name, each as one line of text with its unit."""
+def choice_rows(choices: Mapping[str, object], within: str = "") -> list[tuple[str, str]]:
+    """Choices by name, each as one line of text with its unit; those of a group begin with its name."""
     rows = []
     for key, value in choices.items():
+        name = within + _CHOICE_NAMES.get(key, _spoken(key))
         if isinstance(value, Mapping):
-            rows += [(f"{_CHOICE_NAMES.get(key, _spoken(key))}: {_spoken(str(k))}", _shown(v, str(k)))
-                     for k, v in value.items()]  # fmt: skip
-            continue
-        name = (
-            "largest distance fitted"
-            if key == "r_max_m" and "exponent" in choices
-            else _CHOICE_NAMES.get(key)
-        )
-        rows.append((name or _spoken(key), _shown(value, key)))
+            rows += choice_rows(value, f"{name}: ")
+        else:
+            rows.append((name, _shown(value, key)))
     return rows
 
 

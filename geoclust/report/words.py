@@ -73,12 +73,12 @@ def interval(low: float, high: float, digits: int = 3) -> str:
 
 
 def distance(metres: float) -> str:
-    """A distance in metres with two digits that count.
+    """A distance in metres with at least two digits that count.
 
     Examples
     --------
     >>> distance(3.469), distance(5.0), distance(132.4)
-    ('3.5', '5', '130')
+    ('3.5', '5', '132')
     """
     return number(metres, 2).removesuffix(".0")
 
