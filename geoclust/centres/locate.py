@@ -119,9 +119,5 @@ def locate_centres(
         points=points,
         clusters=clusters,
         zones=None if zones is None else zone_numbers(zones, draws, survey.local_xy, area),
-        unsurveyed=(
-            None
-            if unsurveyed is None
-            else predict_unsurveyed(unsurveyed, sample.setup, draws, prediction_seed)
-        ),
+        unsurveyed=predicted,
     )
