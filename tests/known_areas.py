@@ -65,6 +65,14 @@ def comb(teeth: int = 12, width: float = 20.0, gap: float = 30.0, length: float 
     return shapely.union_all([*strips, spine])
 
 
+def strips(
+    count: int = 12, width: float = 20.0, gap: float = 30.0, length: float = 600.0
+) -> shapely.Geometry:
+    """The teeth of the comb alone, which do not touch."""
+    pitch = width + gap
+    return shapely.MultiPolygon([shapely.box(k * pitch, 0, k * pitch + width, length) for k in range(count)])
+
+
 def _multi(polygon: shapely.Geometry) -> shapely.MultiPolygon:
     return polygon if isinstance(polygon, shapely.MultiPolygon) else shapely.MultiPolygon([polygon])
 

@@ -16,6 +16,7 @@ from geoclust.area.covariance import (
     edge_tree,
     isotropised,
     isotropised_table,
+    met_directions,
     set_covariance,
     shift_table,
 )
@@ -74,7 +75,7 @@ class StudyArea:
         self.area: float = float(
             0.5 * np.sum(self._starts[:, 0] * self._ends[:, 1] - self._ends[:, 0] * self._starts[:, 1])
         )
-        self._reached: dict[bytes, Floats] = {}
+        self._by_radii: dict[tuple[str, bytes], Floats] = {}
         self._dilated: dict[float, StudyArea] = {}
         self._tables: dict[tuple[float, bool], ShiftTable] = {}
         self.perimeter: float = float(np.hypot(*(self._ends - self._starts).T).sum())
@@ -394,9 +395,9 @@ class StudyArea:
         the area is summed over stratified points, about 10,000 in all.
         """
         at = np.atleast_1d(np.asarray(radii, dtype=np.float64))
-        known = self._reached.get(at.tobytes())
+        known = self._kept("reached", at)
         if known is not None:
-            return known.copy()
+            return known
         out = np.full(at.shape, self.area)
         for part, smallest in self._small_parts(float(at.max(initial=0.0))):
             centres, weight, reach = part
@@ -406,9 +407,28 @@ class StudyArea:
                     met = _circles.count_meeting(self.grid, centres[closed] - self.origin, at[k])
                     out[k] -= weight * (len(closed) - met)
         out = np.maximum(out, 0.0)
+        return self._keep("reached", at, out)
+
+    def met_directions(self, radii: npt.ArrayLike) -> Floats:
+        """Share of directions in which a copy shifted by each radius still meets the study area.
+
+        The divisor that keeps translation weights unbiased beyond the width of a
+        strip, where no pair of points can lie across it. From 360 directions.
+        """
+        at = np.atleast_1d(np.asarray(radii, dtype=np.float64))
+        known = self._kept("met", at)
+        return known if known is not None else self._keep("met", at, met_directions(self, at))
+
+    def _kept(self, name: str, radii: Floats) -> Floats | None:
+        known = self._by_radii.get((name, radii.tobytes()))
+        return None if known is None else known.copy()
+
+    def _keep(self, name: str, radii: Floats, values: Floats) -> Floats:
         # simulations ask for the same radii over and over
-        self._reached = {at.tobytes(): out.copy()}
-        return out
+        if len(self._by_radii) >= 16:
+            self._by_radii = {}
+        self._by_radii[name, radii.tobytes()] = values.copy()
+        return values
 
     def _small_parts(self, largest: float) -> list[tuple[tuple[Floats, float, Floats], float]]:
         """Stratified points of every part that fits into a circle of the largest radius.

@@ -8,7 +8,6 @@ from dataclasses import dataclass, replace
 import numpy as np
 import numpy.typing as npt
 
-from geoclust.area.covariance import met_directions
 from geoclust.area.study_area import StudyArea
 from geoclust.area.survey import Survey
 from geoclust.curves.curve import Curve
@@ -327,5 +326,5 @@ def _window(area: StudyArea, radii: Floats, edge_weight: str) -> Floats:
     if edge_weight == "isotropic":
         return area.reached_areas(radii)
     if edge_weight == "translation":
-        return area.area * met_directions(area, radii)
+        return area.area * area.met_directions(radii)
     return np.full(len(radii), area.area)
