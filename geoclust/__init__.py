@@ -24,6 +24,7 @@ if TYPE_CHECKING:
     from geoclust.fitting.fit import fit_clusters
     from geoclust.fitting.result import ClusterFit
     from geoclust.layers.survey_layers import audit_survey
+    from geoclust.models.matern_cluster import MaternCluster
     from geoclust.models.thomas import Thomas
     from geoclust.simulation.patterns import simulate_patterns
     from geoclust.workflow import analyse, read_survey
@@ -55,6 +56,7 @@ _HOMES = {
     "fit_clusters": "geoclust.fitting.fit",
     "ClusterFit": "geoclust.fitting.result",
     "audit_survey": "geoclust.layers.survey_layers",
+    "MaternCluster": "geoclust.models.matern_cluster",
     "Thomas": "geoclust.models.thomas",
     "simulate_patterns": "geoclust.simulation.patterns",
     "analyse": "geoclust.workflow",

@@ -95,8 +95,10 @@ def try_background(data, target, state, step, rng):
 
 
 @njit(nogil=True, cache=True)
-def run(data, target, table, state, work, steps, every, walk, rng):
+def run(data, target, table, state, work, steps, every, walk, mix, rng):
     """Make `steps` moves of centres, and a walk of scale and background after `every` of them.
+
+    `mix` is the share of shifts, and that of splits and merges together.
 
     Returns the moves made: fewer if the arrays for centres are full.
     """
@@ -105,16 +107,17 @@ def run(data, target, table, state, work, steps, every, walk, rng):
         if state.number[0] > room - 2:
             return step
         u = rng.random()
-        if u < 0.2:
-            try_birth(data, target, table, state, work, rng)
-        elif u < 0.4:
-            try_death(data, target, state, work, rng)
-        elif u < 0.7:
+        # half of what is not a shift or a split or merge is births, half deaths: reversible pairs
+        if u < mix[0]:
             try_shift(data, target, table, state, work, rng)
-        elif u < 0.85:
+        elif u < mix[0] + 0.5 * mix[1]:
             try_split(data, target, table, state, work, rng)
-        else:
+        elif u < mix[0] + mix[1]:
             try_merge(data, target, table, state, work, rng)
+        elif u < 0.5 * (1.0 + mix[0] + mix[1]):
+            try_birth(data, target, table, state, work, rng)
+        else:
+            try_death(data, target, state, work, rng)
         if (step + 1) % every == 0:
             if target.free_scale:
                 try_rescale(data, target, table, state, work, walk[0], rng)

@@ -13,6 +13,7 @@ from geoclust.curves._pairs import cell_order
 from geoclust.fitting import _chain, _kernels, _moves
 from geoclust.fitting._table import share_at
 from geoclust.fitting.shares import share_table
+from geoclust.intensity.base import Intensity
 from geoclust.models.base import ClusterModel
 from geoclust.workers import in_order
 
@@ -25,6 +26,9 @@ MOVES = ("birth", "death", "shift", "split", "merge", "scale", "background")
 PORTION = 20_000
 # cells of the points: long rows keep the compiled loops busy, small ones skip points out of reach
 CELL_IN_SCALES = 2.5
+# share of shifts, and of splits and merges, for clusters that stand apart or overlap
+APART = (0.3, 0.3)
+OVERLAPPING = (0.1, 0.2)
 # births proposed anywhere in the widened study area rather than near a point
 UNIFORM_SHARE = 0.15
 
@@ -100,6 +104,9 @@ class ChainSetup:
         Priors of unknown parameters, or None if the parameters are known.
     margin
         How far outside the study area centres are looked for, metres.
+    intensity
+        Thins the points place by place, relative to its mean; None if it is constant. As it is the
+        same factor for every centre that a point may belong to, only the exposures change.
     """
 
     def __init__(
@@ -111,6 +118,7 @@ class ChainSetup:
         priors: Priors | None = None,
         margin: float | None = None,
         workers: int | None = None,
+        intensity: Intensity | None = None,
     ) -> None:
         kind = type(start)
         self.area = area
@@ -120,7 +128,8 @@ class ChainSetup:
         self.margin = kind.margin_in_scales * scale if margin is None else margin
         self.wide = area.dilated(self.margin)
         largest = priors.scale_bounds if priors is not None else (scale, scale)
-        self.table = share_table(kind, area, self.margin, largest, workers)
+        self.table = share_table(kind, area, self.margin, largest, workers, intensity)
+        self.intensity = intensity
         self.reach = kind.reach_in_scales
         self.data, self.order = _sorted_data(local_xy, area, self.wide, scale)
         self.target = _target(start, priors)
@@ -149,6 +158,7 @@ class Chain:
             np.array([scale, eta, 0.0]), np.zeros(7, np.int64), np.zeros(7, np.int64),
         )  # fmt: skip
         self.walk = np.array([0.05, 0.5])
+        self.mix = np.array(APART)
         self._work_arrays()
         self._first_centres(expected * rng.uniform(0.6, 1.4))
         self.records: list[tuple[Floats, float, float, Ints]] = []
@@ -199,7 +209,7 @@ class Chain:
         while left > 0:
             done = _chain.run(
                 self.setup.data, self.setup.target, self.setup.table, self.state, self.work,
-                min(left, PORTION), every, self.walk, self.rng,
+                min(left, PORTION), every, self.walk, self.mix, self.rng,
             )  # fmt: skip
             left -= done
             if self.state.number[0] > len(self.state.share) - 2:
@@ -214,8 +224,11 @@ class Chain:
         self._work_arrays()
 
     def adapt(self) -> None:
-        """Tune the random walks towards one acceptance in three; only before recording."""
+        """Tune the walks towards one acceptance in three, and the mix of moves; only before recording."""
         tried, taken = self.state.tried, self.state.taken
+        births = taken[_moves.BIRTH] / max(tried[_moves.BIRTH], 1)
+        # where births are easy they also carry centres about, and their number is what moves slowly
+        self.mix[:] = OVERLAPPING if births > 0.2 else APART
         for k, move in enumerate((_moves.RESCALE, _moves.BACKGROUND)):
             if tried[move] >= 20:
                 rate = taken[move] / tried[move]

@@ -4,9 +4,10 @@ from __future__ import annotations
 
 from geoclust.errors import not_allowed
 from geoclust.models.base import ClusterModel
+from geoclust.models.matern_cluster import MaternCluster
 from geoclust.models.thomas import Thomas
 
-MODELS: dict[str, type[ClusterModel]] = {kind.name: kind for kind in (Thomas,)}
+MODELS: dict[str, type[ClusterModel]] = {kind.name: kind for kind in (Thomas, MaternCluster)}
 
 
 def model_by_name(name: str) -> type[ClusterModel]:

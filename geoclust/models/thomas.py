@@ -49,9 +49,9 @@ class Thomas(ClusterModel):
 
     scale_name: ClassVar[str] = "sigma"
     kernel_code: ClassVar[int] = 0
-    # beyond five sigma lie 4e-6 of the offspring
-    reach_in_scales: ClassVar[float] = 5.0
-    # beyond 4.5 sigma lie 4e-5 of them
+    # beyond 4.5 sigma lie 4e-5 of the offspring
+    reach_in_scales: ClassVar[float] = 4.5
+    # and so far outside a centre still matters
     margin_in_scales: ClassVar[float] = 4.5
 
     def offspring_density(self, r: npt.ArrayLike) -> Floats:
