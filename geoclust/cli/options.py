@@ -107,7 +107,7 @@ _DECLARED = (
            metavar="NAME"),
     Option("--simulations", "Random patterns for the envelopes, at least 39.", default=999,
            kind=click.IntRange(min=39), metavar="COUNT"),
-    Option("--method", "Way of fitting: posterior, or minimum-contrast for a quick look.",
+    Option("--method", "Way of fitting, minimum-contrast the quick look; a wrong name lists all.",
            default="posterior", kind=str, metavar="NAME"),
     Option("--background", "Points may belong to no cluster (posterior only)."),
     Option("--chains", "Chains of the sampler, at least 2.", default=4, kind=click.IntRange(min=2),

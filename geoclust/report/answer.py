@@ -12,6 +12,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from geoclust.layers.audit import area_text
 from geoclust.report import words
 
 if TYPE_CHECKING:
@@ -231,12 +232,12 @@ def _count(survey: Survey, fit: ClusterFit, centres: CentreMap | None) -> str:
     limits = fit.intervals.get("parent_intensity")
     shown = None if limits is None else (words.per_hectare(limits[0]), words.per_hectare(limits[1]))
     text = f"There are **{words.number(rho)}** cluster centres per hectare{_clause(shown, '')}"
-    hectares = words.number(survey.area.area / words.HECTARE)
+    extent = area_text(survey.area.area)
     if centres is None:
-        return f"{text} in the study area of {hectares} ha."
+        return f"{text} in the study area of {extent}."
     mean, low, high = centres.interval_inside()
     return (
-        f"{text}. In the study area of {hectares} ha that makes **{words.whole(mean)}** centres "
+        f"{text}. In the study area of {extent} that makes **{words.whole(mean)}** centres "
         f"(95 % interval {words.counts_between(low, high)}{given(fit)})."
     )
 

@@ -122,7 +122,7 @@ def number_figure(centres: CentreMap) -> Figure:
         heights = 100 * shares / len(draws)
         ax.bar(middles[inside], heights[inside], 0.92 * width, color=canvas.CLUSTER, label="95 % interval")
         ax.bar(middles[~inside], heights[~inside], 0.92 * width, color=canvas.BAND, label="beyond it")
-        ax.axvline(mean, color=canvas.UNSURE, lw=2, label="mean")
+        ax.vlines(mean, 0, 1.06 * heights.max(), color=canvas.UNSURE, lw=2, label="mean")
         ax.set_xlabel("number of cluster centres inside the study area")
         ax.set_ylabel("share of the sample (%)")
         ax.xaxis.set_major_locator(MaxNLocator(integer=True, nbins=8, steps=[1, 2, 5, 10]))

@@ -315,6 +315,10 @@ def _draw_ramp(sheet: _Sheet, places: Floats, labels: list[str], title: str) -> 
     ax.imshow(np.linspace(0, 1, 256)[None, :], cmap=canvas.RAMP_COLOURS, extent=(0, 1, 0, 1), aspect="auto")
     ax.set_yticks([])
     ax.set_xticks(places if len(labels) > 1 else [1.0], labels)
+    if len(labels) > 1:
+        # the outermost labels stay on the sheet
+        ax.get_xticklabels()[0].set_horizontalalignment("left")
+        ax.get_xticklabels()[-1].set_horizontalalignment("right")
     ax.tick_params(axis="x", length=2.5, labelsize=9, pad=1.5)
     ax.set_title(title, fontsize=9.5, loc="left", pad=3)
     for side in ax.spines.values():

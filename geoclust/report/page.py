@@ -12,6 +12,7 @@ from jinja2 import Environment, PackageLoader, StrictUndefined
 from markupsafe import Markup, escape
 
 from geoclust.errors import OutputError
+from geoclust.layers.audit import area_text
 from geoclust.report import answer, canvas, figures, maps, method, tables, words
 
 if TYPE_CHECKING:
@@ -172,8 +173,7 @@ def _facts(survey: Survey, audit: Audit | None) -> list[str]:
     shape += [words.plural(holes, "hole")] if holes else []
     facts = [
         words.plural(survey.n, "mapped point"),
-        f"{words.number(area.area / words.HECTARE, 4)} ha study area"
-        + (f" ({words.listed(shape)})" if shape else ""),
+        f"{area_text(area.area)} study area" + (f" ({words.listed(shape)})" if shape else ""),
         f"{words.number(words.per_hectare(survey.intensity))} points per hectare",
     ]
     return [*facts, f"measured in {audit.metric_crs}"] if audit is not None else facts
@@ -300,7 +300,10 @@ def _diagnostics(
 ) -> list[tuple[str, str]]:
     rows: list[tuple[str, str]] = []
     for name, test in (envelopes or {}).items():
-        away = [f"{a:.3g} to {b:.3g} m ({side})" for a, b, side in test.departures()]
+        away = [
+            f"{a:.3g} m ({side})" if a == b else f"{a:.3g} to {b:.3g} m ({side})"
+            for a, b, side in test.departures()
+        ]
         rows.append(
             (f"complete randomness by {name}", f"p = {words.probability(test.p_value)}; outside the "
                                                "envelope: "

@@ -44,6 +44,11 @@ def parameter_table(fit: ClusterFit, survey: Survey, centres: CentreMap | None) 
         rows.append(
             (name, words.number(factor * fit.parameters[p.name]), _limits(limits, factor), unit, meaning)
         )
+    if "background_intensity" in fit.draws:
+        value = words.per_hectare(float(np.median(fit.draws["background_intensity"])))
+        limits = fit.intervals.get("background_intensity")
+        meaning = "points per hectare that belong to no cluster"
+        rows.append(("background ε", words.number(value), _limits(limits, words.HECTARE), "ha⁻¹", meaning))
     for share, text in ((0.5, "half"), (0.95, "95 %")):
         radius, limits = radius_holding(fit, share)
         meaning = f"distance from the centre within which {text} of a cluster's points lie"

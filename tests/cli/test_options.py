@@ -13,7 +13,7 @@ from click.testing import CliRunner
 from geoclust.cli import options, places
 from geoclust.cli.entry import cli, run
 from geoclust.errors import UsageError
-from geoclust.fitting.fit import METHODS, fit_clusters
+from geoclust.fitting.fit import fit_clusters
 from geoclust.workflow import analyse
 
 COMMANDS = ("audit", "describe", "fit", "locate", "simulate", "analyse")
@@ -82,10 +82,6 @@ def test_defaults_are_those_of_the_functions():
 def test_every_argument_of_analyse_has_its_option():
     known = set(inspect.signature(analyse).parameters) - {"progress", "command"}
     assert known <= {p.name for p in cli.commands["analyse"].params}
-
-
-def test_methods_are_told():
-    assert all(method in options.OPTIONS["method"].what for method in METHODS)
 
 
 def test_examples():
