@@ -26,7 +26,7 @@ from geoclust.workers import in_order
 __all__ = ["Floats", "StudyArea", "checked_points", "portions"]
 
 # circles per portion of threaded work: large enough to hide the cost of a task
-PORTION = 20_000
+PORTION = 5_000
 
 
 class StudyArea:

@@ -22,6 +22,9 @@ from geoclust.area._circles import cross_piece, share_from_product
 
 # cells per largest distance
 FINE = 3
+# rings of distance under which the pieces about a point are filed, if there are more than a few
+RINGS = 128
+FEW = 24
 
 
 class SortedPoints(NamedTuple):
@@ -211,6 +214,74 @@ def fill_depths(grid, deep, x, y, limit, out):
 
 
 @njit(nogil=True, cache=True)
+def pieces_about(grid, cx, cy, reach, pieces, spans):
+    """List the pieces within `reach` of a centre, relative to it, and their nearest and furthest distances.
+
+    Returns how many there are and both lists, longer ones if they were too short.
+    """
+    found = 0
+    wide = reach + 0.5 * grid.cell
+    i_low = max(int(np.floor((cx - wide - grid.left) / grid.cell)), 0)
+    i_high = min(int(np.floor((cx + wide - grid.left) / grid.cell)), grid.columns - 1)
+    j_low = max(int(np.floor((cy - wide - grid.bottom) / grid.cell)), 0)
+    j_high = min(int(np.floor((cy + wide - grid.bottom) / grid.cell)), grid.rows - 1)
+    for j in range(j_low, j_high + 1):
+        base = j * grid.columns
+        k_low, k_high = grid.first[base + i_low], grid.first[base + i_high + 1]
+        if found + k_high - k_low > pieces.shape[0]:
+            more = np.empty((2 * (found + k_high - k_low), 4))
+            more[:found] = pieces[:found]
+            pieces = more
+            wider = np.empty((more.shape[0], 2))
+            wider[:found] = spans[:found]
+            spans = wider
+        for k in range(k_low, k_high):
+            ax, ay = grid.x0[k] - cx, grid.y0[k] - cy
+            bx, by = grid.x1[k] - cx, grid.y1[k] - cy
+            ux, uy = bx - ax, by - ay
+            t = min(max(-(ax * ux + ay * uy) / (ux * ux + uy * uy), 0.0), 1.0)
+            px, py = ax + t * ux, ay + t * uy
+            near2 = px * px + py * py
+            if near2 < reach * reach:
+                pieces[found, 0], pieces[found, 1] = ax, ay
+                pieces[found, 2], pieces[found, 3] = bx, by
+                spans[found, 0] = near2
+                spans[found, 1] = max(ax * ax + ay * ay, bx * bx + by * by)
+                found += 1
+    return found, pieces, spans
+
+
+@njit(nogil=True, cache=True)
+def file_by_distance(spans, found, scale, first, filed):
+    """File pieces under the rings of distance that they reach into; returns the list, grown if need be.
+
+    A circle then only meets the pieces of its own ring. Limits are widened by far
+    more than rounding, so that no piece with ends on both sides of a circle is missed.
+    """
+    rings = first.size - 1
+    first[:] = 0
+    for k in range(found):
+        low = min(int(np.sqrt(spans[k, 0]) * scale * (1.0 - 1e-9)), rings - 1)
+        high = min(int(np.sqrt(spans[k, 1]) * scale * (1.0 + 1e-9)), rings - 1)
+        # kept for the second pass
+        spans[k, 0], spans[k, 1] = low, high
+        for ring in range(low, high + 1):
+            first[ring] += 1
+    # first[ring] ends each ring, until filling it from the back makes it the beginning
+    for ring in range(1, rings):
+        first[ring] += first[ring - 1]
+    total = first[rings - 1]
+    first[rings] = total
+    if total > filed.size:
+        filed = np.empty(2 * total, np.int64)
+    for k in range(found - 1, -1, -1):
+        for ring in range(int(spans[k, 0]), int(spans[k, 1]) + 1):
+            first[ring] -= 1
+            filed[first[ring]] = k
+    return filed
+
+
+@njit(nogil=True, cache=True)
 def add_isotropic_excess(points, grid, classes, low, high, out):
     """Add (1/share - 1) for every ordered pair whose first point is near the boundary."""
     x, y, weight, first, columns = points.x, points.y, points.weight, points.first, points.columns
@@ -218,9 +289,9 @@ def add_isotropic_excess(points, grid, classes, low, high, out):
     led = points.lead.size > 0
     last = classes.squared[-1]
     largest = np.sqrt(last)
-    room = 256
-    local = np.empty((4, room))
-    reach = largest + 0.5 * grid.cell
+    pieces, spans = np.empty((256, 4)), np.empty((256, 2))
+    ring_first, filed = np.zeros(RINGS + 1, np.int64), np.empty(1024, np.int64)
+    scale = RINGS / largest
     for c in range(cell_of(first, low), first.size - 1):
         if first[c] >= high:
             break
@@ -231,33 +302,10 @@ def add_isotropic_excess(points, grid, classes, low, high, out):
                 continue
             ax, ay = x[a], y[a]
             depth2 = points.depth[a] * points.depth[a]
-            # pieces within reach of the largest circle, once for all neighbours
-            pieces = 0
-            i_low = max(int(np.floor((ax - reach - grid.left) / grid.cell)), 0)
-            i_high = min(int(np.floor((ax + reach - grid.left) / grid.cell)), grid.columns - 1)
-            j_low = max(int(np.floor((ay - reach - grid.bottom) / grid.cell)), 0)
-            j_high = min(int(np.floor((ay + reach - grid.bottom) / grid.cell)), grid.rows - 1)
-            for gj in range(j_low, j_high + 1):
-                base = gj * grid.columns
-                k_low, k_high = grid.first[base + i_low], grid.first[base + i_high + 1]
-                if pieces + k_high - k_low > room:
-                    grown = np.empty((4, 2 * (pieces + k_high - k_low)))
-                    grown[:, :pieces] = local[:, :pieces]
-                    local = grown
-                    room = local.shape[1]
-                for k in range(k_low, k_high):
-                    ex0, ey0 = grid.x0[k] - ax, grid.y0[k] - ay
-                    ex1, ey1 = grid.x1[k] - ax, grid.y1[k] - ay
-                    ux, uy = ex1 - ex0, ey1 - ey0
-                    t = -(ex0 * ux + ey0 * uy) / (ux * ux + uy * uy)
-                    t = min(max(t, 0.0), 1.0)
-                    px, py = ex0 + t * ux, ey0 + t * uy
-                    if px * px + py * py < last:
-                        local[0, pieces] = ex0
-                        local[1, pieces] = ey0
-                        local[2, pieces] = ex1
-                        local[3, pieces] = ey1
-                        pieces += 1
+            found, pieces, spans = pieces_about(grid, ax, ay, largest, pieces, spans)
+            many = found > FEW
+            if many:
+                filed = file_by_distance(spans, found, scale, ring_first, filed)
             for jj in range(max(j - FINE, 0), min(j + FINE, points.rows - 1) + 1):
                 run = first[jj * columns + max(i - FINE, 0)]
                 end = first[jj * columns + min(i + FINE, columns - 1) + 1]
@@ -268,9 +316,15 @@ def add_isotropic_excess(points, grid, classes, low, high, out):
                         continue
                     d = np.sqrt(d2)
                     re, im, crossings = 1.0, 0.0, 0
-                    for k in range(pieces):
+                    if many:
+                        ring = min(int(d * scale), RINGS - 1)
+                        k_low, k_high = ring_first[ring], ring_first[ring + 1]
+                    else:
+                        k_low, k_high = 0, found
+                    for k in range(k_low, k_high):
+                        p = filed[k] if many else k
                         re, im, more = cross_piece(
-                            local[0, k], local[1, k], local[2, k], local[3, k], d2, re, im
+                            pieces[p, 0], pieces[p, 1], pieces[p, 2], pieces[p, 3], d2, re, im
                         )
                         crossings += more
                     share = share_from_product(grid, ax, ay, d, re, im, crossings)

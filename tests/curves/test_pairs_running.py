@@ -56,14 +56,14 @@ def test_an_interrupt_stops_it(job: str, workers: int):
         assert run.poll() is None
         run.send_signal(signal.SIGINT)
         asked = time.monotonic()
-        out, err = run.communicate(timeout=20)
+        out, err = run.communicate(timeout=60)
         waited = time.monotonic() - asked
     finally:
         run.kill()
     assert "end" not in out
     assert "KeyboardInterrupt" in err
-    # a second, and some for a busy machine and for Python to leave
-    assert waited < 4.0
+    # within a second on an idle machine, of minutes of work; the rest is for a busy one
+    assert waited < 20.0
 
 
 def test_kernels_are_read_from_disk_by_the_next_process():
