@@ -93,7 +93,7 @@ def locate_centres(
     chain_seed, prediction_seed = np.random.default_rng(rng).spawn(2)
     sample = fit.sample
     if sample is None:
-        setup = ChainSetup(survey.local_xy, area, fit.model, workers=workers)
+        setup = ChainSetup(survey.local_xy, area, fit.model, workers=workers, intensity=fit.intensity)
         sample = sample_until_converged(
             setup, rng=chain_seed, chains=chains, workers=workers, progress=progress
         )

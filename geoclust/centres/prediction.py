@@ -9,6 +9,8 @@ import shapely
 
 from geoclust.area.study_area import StudyArea
 from geoclust.fitting.sampling import ChainSetup, Draws
+from geoclust.intensity.base import Intensity
+from geoclust.intensity.cells import Cells
 
 Floats = npt.NDArray[np.float64]
 
@@ -73,6 +75,20 @@ def zone_numbers(
     return _with_numbers(zones, parts, {"points": points, **_summary(counts, "centres")})
 
 
+def _thinning(part: StudyArea, intensity: Intensity | None) -> tuple[float, float]:
+    """Largest and mean intensity in a part that was not walked, relative to that of the study area.
+
+    From its cells, where the covariates are known there too.
+    """
+    if intensity is None:
+        return 1.0, 1.0
+    cells = Cells.square(part, float(np.sqrt(part.area / 10_000)))
+    places = cells.places(2)
+    values = intensity.at(places.reshape(-1, 2)).reshape(len(cells), -1) / intensity.mean
+    # between the places it may be a little higher
+    return 1.1 * float(values.max()), float(values.mean(axis=1) @ cells.areas / part.area)
+
+
 def predict_unsurveyed(
     unsurveyed: gpd.GeoDataFrame, setup: ChainSetup, draws: Draws, rng: np.random.Generator
 ) -> gpd.GeoDataFrame:
@@ -86,7 +102,7 @@ def predict_unsurveyed(
     Adds `area_ha` (of the part not walked), `points_mean`, `points_low`,
     `points_high` and the same for centres (95 % prediction intervals).
     """
-    area, kind = setup.area, type(setup.start)
+    area, kind, intensity = setup.area, type(setup.start), setup.intensity
     parts = _areas(unsurveyed.geometry.difference(area.polygon), area)
     flat = [
         (draws.centres[a][b], draws.scale[a, b], draws.parent_intensity[a, b],
@@ -98,6 +114,7 @@ def predict_unsurveyed(
     for k, part in enumerate(parts):
         if part is None:
             continue
+        most, mean = _thinning(part, intensity)
         wide = part.dilated(setup.margin)
         beyond = _polygon_part(wide.polygon.difference(setup.wide.polygon))
         outer = None if beyond.is_empty else StudyArea(beyond, area.crs)
@@ -109,7 +126,11 @@ def predict_unsurveyed(
                 where = np.concatenate([where, fresh])
             centres[k, m] = part.contains(where).sum()
             model = kind.of(rho, scale, mu)
-            source = np.repeat(where, rng.poisson(mu, len(where)), axis=0)
+            source = np.repeat(where, rng.poisson(mu * most, len(where)), axis=0)
             offspring = source + model.draw_offsets(len(source), rng)
-            points[k, m] = part.contains(offspring).sum() + rng.poisson(epsilon * part.area)
+            held = part.contains(offspring)
+            if intensity is not None:
+                there = intensity.at(offspring[held]) / intensity.mean
+                held[held] = rng.random(len(there)) * most < there
+            points[k, m] = held.sum() + rng.poisson(epsilon * mean * part.area)
     return _with_numbers(unsurveyed, parts, {**_summary(points, "points"), **_summary(centres, "centres")})

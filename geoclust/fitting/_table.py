@@ -20,6 +20,7 @@ class ShareTable(NamedTuple):
     rows: np.ndarray
     log_scale: float  # of level 0
     log_step: float
+    most: float  # no share is larger: 1, or more where offspring are thinned relative to the mean
 
 
 @njit(nogil=True, cache=True, inline="always")
@@ -90,7 +91,7 @@ def level_share(table, level, x, y):
         else:
             total += v5 * part
         row += columns
-    return min(max(total, 0.0), 1.0)
+    return min(max(total, 0.0), table.most)
 
 
 @njit(nogil=True, cache=True)
@@ -112,4 +113,4 @@ def share_at(table, x, y, scale):
         + w2 * level_share(table, base + 1, x, y)
         + w3 * widest
     )
-    return min(max(total, 0.0), 1.0)
+    return min(max(total, 0.0), table.most)

@@ -12,6 +12,7 @@ from geoclust.errors import not_allowed
 from geoclust.fitting.moments import ContrastChoices, fit_by_contrast
 from geoclust.fitting.posterior import fit_by_posterior
 from geoclust.fitting.result import ClusterFit
+from geoclust.intensity.base import Intensity
 from geoclust.models.catalogue import model_by_name
 
 Progress = Callable[[str, int, int], None]
@@ -32,6 +33,7 @@ def fit_clusters(
     bootstrap: int = 199,
     background: bool = False,
     chains: int = 4,
+    intensity: Intensity | None = None,
     rng: np.random.Generator | int,
     workers: int | None = None,
     progress: Progress | None = None,
@@ -61,6 +63,10 @@ def fit_clusters(
         Whether points may belong to no cluster (posterior only).
     chains
         Chains of the sampler, at least two.
+    intensity
+        Fitted to the survey on covariates: clusters are then those beyond it. Centres keep a
+        constant intensity, and their offspring are thinned in proportion to it, place by place
+        (Waagepetersen 2007, Biometrics 63: 252-258); mean offspring is that at the mean intensity.
     rng
         Generator or seed; the answer does not depend on `workers`.
     workers, progress
@@ -90,11 +96,11 @@ def fit_clusters(
     if method == "posterior":
         sampled = fit_by_posterior(
             survey, kind, choices=choices, background=background, chains=chains,
-            rng=np.random.default_rng(rng), workers=workers, progress=progress,
+            rng=np.random.default_rng(rng), workers=workers, progress=progress, intensity=intensity,
         )  # fmt: skip
-        return replace(sampled, seed=rng if isinstance(rng, int) else None)
+        return replace(sampled, seed=rng if isinstance(rng, int) else None, intensity=intensity)
     found = fit_by_contrast(
         survey, kind, choices=choices, bootstrap=bootstrap, rng=np.random.default_rng(rng),
-        workers=workers, progress=progress,
+        workers=workers, progress=progress, intensity=intensity,
     )  # fmt: skip
-    return replace(found, seed=rng if isinstance(rng, int) else None)
+    return replace(found, seed=rng if isinstance(rng, int) else None, intensity=intensity)

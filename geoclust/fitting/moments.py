@@ -17,6 +17,8 @@ from geoclust.errors import CannotTell, not_allowed
 from geoclust.fitting import status as verdicts
 from geoclust.fitting.contrast import EXPONENTS, Contrast, ContrastFit, checked_function, fit_contrast
 from geoclust.fitting.result import ClusterFit
+from geoclust.intensity.base import Intensity
+from geoclust.intensity.envelopes import inhomogeneous_envelopes
 from geoclust.models.base import ClusterModel
 from geoclust.models.patterns import draw_pattern
 from geoclust.workers import in_order
@@ -79,8 +81,12 @@ def fit_points(
     area: StudyArea,
     choices: ContrastChoices,
     workers: int | None = 1,
+    factors: Floats | None = None,
 ) -> MomentFit:
-    """Fit a model to points in local coordinates; the range follows the clusters unless it is set."""
+    """Fit a model to points in local coordinates; the range follows the clusters unless it is set.
+
+    `factors` are one over the intensity at each point, for the weighted curve, or None.
+    """
     widest = 0.25 * float(np.sqrt(area.area))
     r_min = choices.r_min or 0.0
     if choices.r_max is not None and choices.r_max > area.diameter:
@@ -90,12 +96,12 @@ def fit_points(
     if choices.r_max is None and r_min > 0.5 * widest:
         raise not_allowed("r_min", f"at most {0.5 * widest:.4g} m here, unless r_max is given too", r_min)
     r_max = choices.r_max if choices.r_max is not None else widest
-    found = _fit_range(kind, local_xy, area, choices, r_max, workers)
+    found = _fit_range(kind, local_xy, area, choices, r_max, workers, factors)
     if choices.r_max is None:
         shorter = RANGE_IN_SCALES[choices.function] * found.fit.model.scale
         if shorter < 0.8 * widest:
             r_max = max(shorter, 4.0 * found.bandwidth, 2.0 * r_min)
-            found = _fit_range(kind, local_xy, area, choices, r_max, workers)
+            found = _fit_range(kind, local_xy, area, choices, r_max, workers, factors)
     return found
 
 
@@ -106,6 +112,7 @@ def _fit_range(
     choices: ContrastChoices,
     r_max: float,
     workers: int | None,
+    factors: Floats | None,
 ) -> MomentFit:
     intensity = len(local_xy) / area.area
     width = choices.bandwidth if choices.bandwidth is not None else default_bandwidth(intensity)
@@ -116,7 +123,9 @@ def _fit_range(
     radii = np.linspace(r_min, r_max, NODES + 1)
     radii = radii[1:] if radii[0] == 0 else radii
     g = choices.function == "g"
-    measured = SecondOrder.of_points(local_xy, area, radii, width if g else None, workers=workers)
+    measured = SecondOrder.of_points(
+        local_xy, area, radii, width if g else None, workers=workers, point_weights=factors
+    )
     values = measured.g_values() if g else measured.k_values()
     exponent = choices.exponent if choices.exponent is not None else EXPONENTS[choices.function]
     contrast = Contrast(choices.function, radii, values, exponent, width if g else None)
@@ -132,20 +141,24 @@ def fit_by_contrast(
     rng: np.random.Generator,
     workers: int | None = None,
     progress: Progress | None = None,
+    intensity: Intensity | None = None,
 ) -> ClusterFit:
     """Fit by minimum contrast, with a parametric bootstrap interval and a verdict.
 
     The bootstrap draws patterns from the fit in the same study area and repeats
     the whole procedure, choice of range included; the interval of each
-    parameter is that of the middle 95 % of the refitted values.
+    parameter is that of the middle 95 % of the refitted values. With an intensity the curve
+    is weighted by it, and the patterns are thinned and their intensity fitted anew.
     """
     test_seed, boot_seed = rng.spawn(2)
     if survey.n < verdicts.FEWEST_POINTS:
         reason = verdicts.sentence("too-few-points", n=survey.n, fewest=verdicts.FEWEST_POINTS)
         raise CannotTell("too-few-points", reason)
-    found = fit_points(kind, survey.local_xy, survey.area, choices, workers)
-    p_value = clustering_p_value(survey, found.r_max, test_seed, workers, progress)
-    draws = _bootstrap(kind, found.fit.model, survey.area, choices, bootstrap, boot_seed, workers, progress)
+    found = fit_points(kind, survey.local_xy, survey.area, choices, workers, factors_of(intensity))
+    p_value = clustering_p_value(survey, found.r_max, test_seed, workers, progress, intensity)
+    draws = _bootstrap(
+        kind, found.fit.model, survey.area, choices, bootstrap, boot_seed, workers, progress, intensity
+    )
     intervals = {
         name: (float(np.quantile(v, 0.025)), float(np.quantile(v, 0.975)))
         for name, v in draws.items()
@@ -195,12 +208,27 @@ def fitted_curve(found: MomentFit) -> tuple[Curve, Floats]:
     return curve, contrast.curve_of(found.fit.model)
 
 
+def factors_of(intensity: Intensity | None) -> Floats | None:
+    """One over the intensity at the points it was fitted to, or None if it is constant."""
+    return None if intensity is None else 1.0 / intensity.at_own_points()
+
+
 def clustering_p_value(
-    survey: Survey, r_max: float, rng: np.random.Generator, workers: int | None, progress: Progress | None
+    survey: Survey,
+    r_max: float,
+    rng: np.random.Generator,
+    workers: int | None,
+    progress: Progress | None,
+    intensity: Intensity | None = None,
 ) -> float:
     """One-sided test for clustering: extreme rank length of L over the fitted range, 199 simulations."""
     count = 199
     radii = np.linspace(0.0, r_max, 51)[1:]
+    if intensity is not None:
+        return inhomogeneous_envelopes(
+            survey, intensity, radii, functions=("L",), simulations=count, alternative="clustered",
+            rng=rng, workers=workers, progress=progress,
+        )["L"].p_value  # fmt: skip
     observed = SecondOrder.measure(survey, radii, None, "isotropic", workers).l()
 
     def one(seed: np.random.Generator) -> Floats:
@@ -224,12 +252,14 @@ def _bootstrap(
     rng: np.random.Generator,
     workers: int | None,
     progress: Progress | None,
+    intensity: Intensity | None = None,
 ) -> dict[str, Floats]:
     def one(seed: np.random.Generator) -> dict[str, float] | None:
-        points = draw_pattern(model, area, seed).points
+        points = draw_pattern(model, area, seed, intensity).points
         if len(points) < 2:
             return None
-        return fit_points(kind, points, area, choices).fit.model.parameters
+        again = None if intensity is None else factors_of(intensity.refit(points, seed))
+        return fit_points(kind, points, area, choices, factors=again).fit.model.parameters
 
     kept: list[dict[str, float]] = []
     for k, parameters in enumerate(in_order(one, rng.spawn(count), workers)):

@@ -11,9 +11,17 @@ from geoclust.area.survey import Survey
 from geoclust.errors import CannotTell
 from geoclust.fitting import status as verdicts
 from geoclust.fitting.convergence import ENOUGH, Sample, sample_until_converged
-from geoclust.fitting.moments import ContrastChoices, MomentFit, clustering_p_value, fit_points, fitted_curve
+from geoclust.fitting.moments import (
+    ContrastChoices,
+    MomentFit,
+    clustering_p_value,
+    factors_of,
+    fit_points,
+    fitted_curve,
+)
 from geoclust.fitting.result import ClusterFit
 from geoclust.fitting.sampling import ChainSetup, Priors
+from geoclust.intensity.base import Intensity
 from geoclust.models.base import ClusterModel
 
 Progress = Callable[[str, int, int], None]
@@ -54,6 +62,7 @@ def fit_by_posterior(
     rng: np.random.Generator,
     workers: int | None = None,
     progress: Progress | None = None,
+    intensity: Intensity | None = None,
 ) -> ClusterFit:
     """Fit by sampling the posterior; a minimum contrast fit is the starting value.
 
@@ -64,8 +73,8 @@ def fit_by_posterior(
     if survey.n < verdicts.FEWEST_POINTS:
         reason = verdicts.sentence("too-few-points", n=survey.n, fewest=verdicts.FEWEST_POINTS)
         raise CannotTell("too-few-points", reason)
-    pilot = fit_points(kind, survey.local_xy, survey.area, choices, workers)
-    p_value = clustering_p_value(survey, pilot.r_max, test_seed, workers, progress)
+    pilot = fit_points(kind, survey.local_xy, survey.area, choices, workers, factors_of(intensity))
+    p_value = clustering_p_value(survey, pilot.r_max, test_seed, workers, progress, intensity)
     priors = default_priors(survey.n, survey.area, background)
     facts: dict[str, object] = {
         "pilot": dict(pilot.fit.model.parameters),
@@ -81,7 +90,7 @@ def fit_by_posterior(
         return _without_sample(kind, survey, pilot, facts, "no-clustering", reason)
     sample = sample_posterior(
         survey.local_xy, survey.area, _starting_model(pilot, survey, priors), priors,
-        chains=chains, rng=sample_seed, workers=workers, progress=progress,
+        chains=chains, rng=sample_seed, workers=workers, progress=progress, intensity=intensity,
     )  # fmt: skip
     return _with_sample(kind, survey, pilot, facts, sample)
 
@@ -98,6 +107,7 @@ def sample_posterior(
     rng: np.random.Generator,
     workers: int | None = None,
     progress: Progress | None = None,
+    intensity: Intensity | None = None,
 ) -> Sample:
     """Sample centres and parameters; the tabulated range of scales is widened if the chains reach its end.
 
@@ -113,6 +123,8 @@ def sample_posterior(
         Priors; the scale is cut at their bounds.
     chains, enough, most_rounds, rng, workers, progress
         As for `sample_until_converged`.
+    intensity
+        As for `ChainSetup`.
     """
     low, high = priors.scale_bounds
     factor = TABLE_FACTOR
@@ -123,7 +135,9 @@ def sample_posterior(
         cut = Priors(
             priors.parent_intensity, priors.mean_offspring, priors.log_scale, bounds, priors.background
         )
-        setup = ChainSetup(local_xy, area, start, priors=cut, margin=margin, workers=workers)
+        setup = ChainSetup(
+            local_xy, area, start, priors=cut, margin=margin, workers=workers, intensity=intensity
+        )
         every = int(max(50, start.parent_intensity * setup.wide.area))
         sample = sample_until_converged(
             setup, rng=seed, chains=chains, every=every, enough=enough, most_rounds=most_rounds,

@@ -10,6 +10,7 @@ import numpy.typing as npt
 from geoclust.curves.curve import Curve
 from geoclust.fitting.contrast import ContrastSurface
 from geoclust.fitting.convergence import Sample
+from geoclust.intensity.base import Intensity
 from geoclust.models.base import ClusterModel
 
 Floats = npt.NDArray[np.float64]
@@ -45,6 +46,8 @@ class ClusterFit:
         What the random numbers started from.
     sample
         The posterior sample, centres and memberships included; None for moment fits.
+    intensity
+        What the clusters are thinned by, place by place; None where it is taken as constant.
     """
 
     model: ClusterModel
@@ -59,6 +62,7 @@ class ClusterFit:
     draws: dict[str, Floats] = field(default_factory=dict, repr=False)
     seed: int | None = None
     sample: Sample | None = field(default=None, repr=False)
+    intensity: Intensity | None = field(default=None, repr=False)
 
     @property
     def parameters(self) -> dict[str, float]:

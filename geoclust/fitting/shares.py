@@ -76,6 +76,7 @@ def share_table(
         np.array(column[5], dtype=np.int64),
         float(low),
         float(step),
+        1.0 if intensity is None else intensity.highest / intensity.mean,
     )
 
 

@@ -55,6 +55,20 @@ class Intensity(ABC):
     def record(self) -> dict[str, object]:
         """Choices and figures, for the report."""
 
+    @property
+    @abstractmethod
+    def mean(self) -> float:
+        """Mean over the study area, points per square metre."""
+
+    @property
+    @abstractmethod
+    def highest(self) -> float:
+        """Largest value in the study area, points per square metre."""
+
+    def relative(self, local_xy: Floats) -> Floats:
+        """(n,) intensity over its mean, at local coordinates: how clusters are thinned, place by place."""
+        return np.asarray(self.at(local_xy + self.area.origin) / self.mean)
+
     def raster(self, grid: Grid) -> Floats:
         """Mean intensity in the cells of a raster.
 

@@ -111,8 +111,8 @@ class Cells:
             out[cut] = inside | ~inside.any(axis=1, keepdims=True)
         return out
 
-    def find(self, xy: Floats) -> Numbers:
-        """(n,) number of the cell that holds each position, or of the nearest one."""
+    def find(self, xy: Floats, nearest: bool = True) -> Numbers:
+        """(n,) number of the cell that holds each position, or else of the nearest one, or -1."""
         t = self.transform
         j = np.floor((xy[:, 0] - t.c) / t.a).astype(np.int64)
         i = np.floor((xy[:, 1] - t.f) / t.e).astype(np.int64)
@@ -120,7 +120,7 @@ class Cells:
         held = (i >= 0) & (i < rows) & (j >= 0) & (j < columns)
         out = np.where(held, self.index[np.where(held, i, 0), np.where(held, j, 0)], -1)
         lost = out < 0
-        if lost.any():
+        if nearest and lost.any():
             out[lost] = self._tree.query(xy[lost])[1]
         return out
 

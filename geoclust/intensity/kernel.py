@@ -129,6 +129,14 @@ class KernelIntensity(Intensity):
     def _cell_values(self) -> Floats:
         return self.at(self._cells.centres)
 
+    @property
+    def mean(self) -> float:
+        return float(self._cell_values @ self._cells.areas / self._cells.areas.sum())
+
+    @property
+    def highest(self) -> float:
+        return float(self._cell_values.max())
+
     def draw(self, count: int, rng: np.random.Generator) -> Floats:
         return self._cells.draw(self._cell_values, count, rng)
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
+from functools import cached_property
 
 import numpy as np
 import numpy.typing as npt
@@ -154,15 +155,39 @@ class LogLinearIntensity(Intensity):
         figures = ", ".join(f"{name} {value:.4g}" for name, value in self.coefficients.items())
         return f"<Intensity {self.method}: {figures}>"
 
-    @property
+    @cached_property
     def cell_values(self) -> Floats:
         """(m,) points per square metre in each cell of the quadrature."""
+        return self._of(self.quadrature.values)
+
+    def _of(self, values: Floats) -> Floats:
         beta = np.array(list(self.coefficients.values()))
-        return np.asarray(np.exp(beta[0] + self.quadrature.values @ beta[1:]))
+        return np.asarray(np.exp(beta[0] + values @ beta[1:]))
 
     def at(self, xy: npt.ArrayLike) -> Floats:
+        """(n,) points per square metre: that of the cell, and beyond the cells that of the covariates there.
+
+        Where these have no value, that of the nearest cell.
+        """
         at = self.area.local(xy) + self.area.origin
-        return self.cell_values[self.quadrature.cells.find(at)]
+        cell = self.quadrature.cells.find(at, nearest=False)
+        out = self.cell_values[cell]
+        beyond = np.flatnonzero(cell < 0)
+        if len(beyond):
+            values = self.quadrature.measured(at[beyond])
+            known = np.isfinite(values).all(axis=1)
+            out[beyond[known]] = self._of(values[known])
+            lost = beyond[~known]
+            out[lost] = self.cell_values[self.quadrature.cells.find(at[lost])]
+        return out
+
+    @property
+    def mean(self) -> float:
+        return float(self.cell_values @ self.quadrature.cells.areas / self.quadrature.cells.areas.sum())
+
+    @property
+    def highest(self) -> float:
+        return float(self.cell_values.max())
 
     def at_own_points(self) -> Floats:
         return self.at(self.points + self.area.origin)

@@ -8,6 +8,7 @@ import numpy as np
 import numpy.typing as npt
 
 from geoclust.area.study_area import Floats, StudyArea
+from geoclust.intensity.base import Intensity
 from geoclust.models.base import ClusterModel
 
 # expected number of points missed because their centre lies too far outside
@@ -33,23 +34,35 @@ class Pattern:
     cluster: npt.NDArray[np.int64]
 
 
-def draw_pattern(model: ClusterModel, area: StudyArea, rng: np.random.Generator) -> Pattern:
+def draw_pattern(
+    model: ClusterModel, area: StudyArea, rng: np.random.Generator, intensity: Intensity | None = None
+) -> Pattern:
     """Draw one pattern, offspring of centres outside the study area included.
+
+    With an intensity, points are thinned in proportion to it, centres are not
+    (Waagepetersen 2007, Biometrics 63: 252-258): the mean number of offspring is then
+    that of a centre whose surroundings have the mean intensity.
 
     Centres are drawn in the study area widened so far that fewer than 1e-9
     points are expected to be missed: the expected number of points with a
     centre further out is at most intensity times area times the share of
     offspring beyond that distance.
     """
-    expected = model.intensity * area.area
+    # as many more offspring as thinning to the mean takes away
+    surplus = 1.0 if intensity is None else intensity.highest / intensity.mean
+    expected = model.intensity * surplus * area.area
     distance = model.reach(min(MISSED / max(expected, MISSED), 0.5))
     wide = area.dilated(distance)
     number = int(rng.poisson(model.parent_intensity * wide.area))
     centres = wide.local_uniform_points(number, rng) + (wide.origin - area.origin)
-    sizes = rng.poisson(model.mean_offspring, number)
+    sizes = rng.poisson(model.mean_offspring * surplus, number)
     cluster = np.repeat(np.arange(number), sizes)
     points = centres[cluster] + model.draw_offsets(len(cluster), rng)
     kept = area.local_contains(points)
+    if intensity is not None:
+        inside = np.flatnonzero(kept)
+        chance = intensity.at(points[inside] + area.origin) / intensity.highest
+        kept[inside] = rng.random(len(inside)) < chance
     return Pattern(np.ascontiguousarray(points[kept]), centres, cluster[kept])
 
 

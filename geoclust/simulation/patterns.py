@@ -11,6 +11,7 @@ import numpy as np
 from geoclust.area.study_area import Floats, StudyArea
 from geoclust.errors import CannotTell, UsageError, not_allowed
 from geoclust.fitting.result import ClusterFit
+from geoclust.intensity.base import Intensity
 from geoclust.models.base import ClusterModel
 from geoclust.models.patterns import draw_pattern, draw_random_points
 from geoclust.workers import in_order
@@ -56,9 +57,11 @@ def stream_patterns(
     """
     if count < 1:
         raise not_allowed("count", "a positive whole number", count)
+    intensity: Intensity | None = None
     if isinstance(source, ClusterFit):
         if not source.ok:
             raise CannotTell(source.status, f"There is no model to simulate from: {source.reason}")
+        intensity = source.intensity
         source = source.model
     if not isinstance(source, ClusterModel) and not (np.isfinite(source) and source > 0):
         raise not_allowed("the intensity of complete randomness", "a positive number per m²", source)
@@ -66,7 +69,7 @@ def stream_patterns(
 
     def one(seed: np.random.Generator) -> Floats:
         if isinstance(drawn_from, ClusterModel):
-            return draw_pattern(drawn_from, area, seed).points
+            return draw_pattern(drawn_from, area, seed, intensity).points
         return draw_random_points(drawn_from, area, seed)
 
     # seeds are made as they are needed, so that a million patterns cost no more than one

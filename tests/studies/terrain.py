@@ -145,7 +145,8 @@ def main() -> None:
     for name in THINNING:
         lines.append(
             f"| {name} | {both[name].mean():.4g} | {both[name].std():.3g} "
-            f"| {both[f'{name}_naive'].mean():.3g} | {both[f'{name}_clustered'].mean():.3g} | {covers(both, name, 'naive')} "
+            f"| {both[f'{name}_naive'].mean():.3g} | {both[f'{name}_clustered'].mean():.3g} "
+            f"| {covers(both, name, 'naive')} "
             f"| {covers(both, name, 'clustered')} |"
         )
     height = float(MODEL.pair_correlation(0.0)) - 1
