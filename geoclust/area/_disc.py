@@ -11,7 +11,26 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
-from geoclust.area._edges import is_inside
+from geoclust.area._edges import REFERENCE_X, REFERENCE_Y, is_inside
+
+
+@njit(nogil=True, cache=True)
+def piece_deficit(ax, ay, bx, by, radius):
+    """Sector less triangle under the part of one piece inside the disc, as a share of the disc."""
+    ux, uy = bx - ax, by - ay
+    length = np.sqrt(ux * ux + uy * uy)
+    ux /= length
+    uy /= length
+    h = ax * uy - ay * ux
+    if abs(h) >= radius:
+        return 0.0
+    span = np.sqrt(radius * radius - h * h)
+    ta = ax * ux + ay * uy
+    t0, t1 = max(ta, -span), min(ta + length, span)
+    if t1 <= t0:
+        return 0.0
+    turn = np.arctan2(h * (t1 - t0), h * h + t0 * t1)
+    return (turn - h * (t1 - t0) / (radius * radius)) / (2.0 * np.pi)
 
 
 @njit(nogil=True, cache=True)
@@ -25,24 +44,23 @@ def disc_share(grid, cx, cy, radius):
     share = 1.0 if is_inside(grid, cx, cy) else 0.0
     if i_low > i_high:
         return share
-    for j in range(j_low, j_high + 1):
-        base = j * grid.columns
-        for k in range(grid.first[base + i_low], grid.first[base + i_high + 1]):
-            ax, ay = grid.x0[k] - cx, grid.y0[k] - cy
-            ux, uy = grid.x1[k] - cx - ax, grid.y1[k] - cy - ay
-            length = np.sqrt(ux * ux + uy * uy)
-            ux /= length
-            uy /= length
-            h = ax * uy - ay * ux
-            if abs(h) >= radius:
-                continue
-            span = np.sqrt(radius * radius - h * h)
-            ta = ax * ux + ay * uy
-            t0, t1 = max(ta, -span), min(ta + length, span)
-            if t1 <= t0:
-                continue
-            turn = np.arctan2(h * (t1 - t0), h * h + t0 * t1)
-            share -= (turn - h * (t1 - t0) / (radius * radius)) / (2.0 * np.pi)
+    deficit = 0.0
+    # on a vertex the angles of its two edges are undefined: a step of a hair tells them
+    for step in range(2):
+        hair = step * (1e-12 * radius + 4e-16 * (abs(cx) + abs(cy)))
+        px, py = cx + hair * REFERENCE_X, cy + hair * REFERENCE_Y
+        deficit, on_vertex = 0.0, False
+        for j in range(j_low, j_high + 1):
+            base = j * grid.columns
+            for k in range(grid.first[base + i_low], grid.first[base + i_high + 1]):
+                ax, ay = grid.x0[k] - px, grid.y0[k] - py
+                if ax == 0.0 and ay == 0.0:
+                    on_vertex = True
+                    break
+                deficit += piece_deficit(ax, ay, grid.x1[k] - px, grid.y1[k] - py, radius)
+        if not on_vertex:
+            break
+    share -= deficit
     # a centre exactly on an edge may be counted on either side of it, a whole turn apart
     if share < -1e-6:
         share += 1.0

@@ -85,8 +85,11 @@ def try_background(data, target, state, step, rng):
             log_a += np.log(ratio)
             ratio = 1.0
     log_a += np.log(ratio)
-    rest = state.scalars[EXPOSURE] + target.mu_rate
-    log_a -= (data.x.size + target.mu_shape) * np.log((rest + new * data.area) / (rest + old * data.area))
+    if target.known:
+        log_a -= target.mu * (new - old) * data.area
+    else:
+        rest = state.scalars[EXPOSURE] + target.mu_rate
+        log_a -= (data.x.size + target.mu_shape) * np.log((rest + new * data.area) / (rest + old * data.area))
     if np.log(rng.random()) < log_a:
         for k in range(data.x.size):
             state.density[k] += more

@@ -245,7 +245,9 @@ def birth_density(data, target, near_sum):
 
     `near_sum` is the sum of the kernel round the place over all points.
     """
-    near = near_sum / data.x.size if data.x.size > 0 else 0.0
+    if data.x.size == 0:
+        return 1.0 / data.wide_area
+    near = near_sum / data.x.size
     return target.uniform_share / data.wide_area + (1.0 - target.uniform_share) * near
 
 
