@@ -115,6 +115,15 @@ _MODELS: dict[str, tuple[str, tuple[str, ...]]] = {
         "a Gaussian with standard deviation σ per axis.",
         ("g(r) = 1 + exp(−r²/4σ²) / (4πσ²ρ)", "K(r) = πr² + (1 − exp(−r²/4σ²)) / ρ", "λ = ρμ"),
     ),
+    "matern-cluster": (
+        "Centres lie at random, ρ per unit area; each has a Poisson number of points with mean μ, spread "
+        "evenly over a disc of radius R round it.",
+        (
+            "g(r) = 1 + 2 (arccos z − z √(1 − z²)) / (π²R²ρ), z = r/2R, for r ≤ 2R",
+            "g(r) = 1 beyond",
+            "λ = ρμ",
+        ),
+    ),
 }
 _ANY_MODEL = (
     "Centres lie at random, ρ per unit area; each has a Poisson number of points with mean μ. The distance "
@@ -155,6 +164,7 @@ REFERENCES: tuple[str, ...] = (
     "Guan Y (2007) A least-squares cross-validation bandwidth selection approach in pair correlation "
     "function "
     "estimations. Statistics and Probability Letters 77: 1722–1729",
+    "Matérn B (1960) Spatial variation. Meddelanden från Statens Skogsforskningsinstitut 49 (5): 1–144",
     "Møller J, Waagepetersen RP (2004) Statistical inference and simulation for spatial point processes. "
     "Chapman & Hall",
     "Myllymäki M, Mrkvička T, Grabarnik P, Seijo H, Hahn U (2017) Global envelope tests for spatial "

@@ -19,7 +19,7 @@ if TYPE_CHECKING:
     from geoclust.centres.result import CentreMap
     from geoclust.fitting.result import ClusterFit
 
-SYMBOLS = {"parent_intensity": "ρ", "sigma": "σ", "mean_offspring": "μ"}
+SYMBOLS = {"parent_intensity": "ρ", "sigma": "σ", "radius": "R", "mean_offspring": "μ"}
 _UNITS = {"1": "", "m⁻²": "m⁻²", "m": "m"}
 
 

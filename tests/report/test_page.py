@@ -13,6 +13,7 @@ import numpy as np
 import pytest
 
 from geoclust.fitting.status import REASONS
+from geoclust.models.catalogue import MODELS
 from geoclust.report import answer, method
 from geoclust.report.page import write_page
 from geoclust.workflow import FILES
@@ -269,6 +270,15 @@ def test_every_source_has_its_reference(example):
             piece
         )
     assert len(found) == len(set(found))
+
+
+def test_every_model_is_explained(example):
+    for name, kind in MODELS.items():
+        model = kind.of(example.fit.model.parent_intensity, example.fit.model.scale, 6.0)
+        taken = method.steps(dataclasses.replace(example.fit, model=model, intervals={}), True)
+        assert any(name in step.name.replace(" ", "-") and step.formulas for step in taken)
+        year = re.findall(r"\d{4}", kind.source)[0]
+        assert any(year in reference for reference in method.references(taken))
 
 
 def test_half_of_the_centres_lie_on_the_share_that_is_told(example):
