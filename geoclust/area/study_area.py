@@ -20,6 +20,7 @@ from geoclust.area.covariance import (
     set_covariance,
     shift_table,
 )
+from geoclust.area.eroded import ErodedArea
 from geoclust.errors import UsageError, not_allowed
 from geoclust.workers import in_order
 
@@ -77,6 +78,7 @@ class StudyArea:
         )
         self._by_radii: dict[tuple[str, bytes], Floats] = {}
         self._dilated: dict[float, StudyArea] = {}
+        self._eroded: dict[float, ErodedArea] = {}
         self._tables: dict[tuple[float, bool], ShiftTable] = {}
         self.perimeter: float = float(np.hypot(*(self._ends - self._starts).T).sum())
 
@@ -289,6 +291,14 @@ class StudyArea:
             make = isotropised_table if isotropic else shift_table
             known = make(self, largest, workers)
             self._tables = {key: known}
+        return known
+
+    def eroded_area(self, largest: float) -> ErodedArea:
+        """Area of the points deeper than any distance up to `largest` metres; kept for the next call."""
+        known = self._eroded.get(largest)
+        if known is None:
+            known = ErodedArea(self, largest)
+            self._eroded = {largest: known}
         return known
 
     @cached_property

@@ -96,16 +96,17 @@ def add_shifted_pairs(points, classes, table, low_share, tree, grid, whole, hair
 
 
 @njit(nogil=True, cache=True)
-def add_deep_pairs(points, classes, limits, depths, tail, low, high, out):
+def add_deep_pairs(points, classes, limits, eroded, eroded_scale, low, high, out):
     """Add ordered pairs whose first point is no nearer to the boundary than to the second.
 
-    `depths` are those of all points in increasing order, `tail` (n + 1,) the sums of
-    factors from there on. Columns of `out`: sums of w/d, w and w d with w divided by the
-    factors of all points deeper than d; and factors that make, summed up to a limit,
-    the pairs below the limit whose first point is deeper than the limit.
+    `eroded` is a table of the share of W that is deeper than a distance. Columns of
+    `out`: sums of w/d, w and w d with w divided by that share at d; and factors that
+    make, summed up to a limit, the pairs below the limit whose first point is deeper
+    than the limit.
     """
     x, y, first, columns = points.x, points.y, points.first, points.columns
     weighted = points.weight.size > 0
+    led = points.lead.size > 0
     last = classes.squared[-1]
     near = np.empty(256, np.int64)
     for c in range(cell_of(first, low), first.size - 1):
@@ -125,15 +126,22 @@ def add_deep_pairs(points, classes, limits, depths, tail, low, high, out):
                 dx, dy = x[b] - x[a], y[b] - y[a]
                 d2 = dx * dx + dy * dy
                 d = np.sqrt(d2)
+                if points.depth[a] < d and points.depth[b] < d:
+                    continue
+                share = look_up(eroded, eroded_scale, 0.0, dx, dy, d)
+                if share <= 0.0:
+                    # a point is that deep, so only rounding brings us here
+                    continue
                 factor = points.weight[a] * points.weight[b] if weighted else 1.0
                 k = classes.guess[int(d * classes.scale)]
                 while d2 > classes.squared[k]:
                     k += 1
                 for side in range(2):
-                    depth = points.depth[a] if side == 0 else points.depth[b]
-                    if depth < d:
+                    centre = a if side == 0 else b
+                    depth = points.depth[centre]
+                    if depth < d or (led and points.lead[centre] == 0.0):
                         continue
-                    w = factor / tail[np.searchsorted(depths, d)]
+                    w = factor / share
                     if d2 > 0.0:
                         out[k, 0] += w / d
                     out[k, 1] += w

@@ -22,6 +22,8 @@ STEPS = 5e7
 # up to so many pairs, or if the table is worse than this, each pair's set covariance is exact
 EXACT_PAIRS = 10_000
 WORST_TABLE = 1e-3
+# steps of distance in the table of eroded areas
+ERODED_STEPS = 8192
 NO_TABLE = ShiftTable(np.zeros((2, 1)), 0.0, 0.0, 0.0)
 
 EDGE_WEIGHTS = ("isotropic", "translation", "rigid-motion", "minus-sampling", "unweighted")
@@ -51,9 +53,10 @@ class PairSums:
         """Add the sums of another set of first points over the same classes."""
         if not np.array_equal(self.edges, other.edges):
             raise ValueError("pair sums over different classes cannot be added")
-        if self.border is not None or other.border is not None:
-            raise ValueError("sums of minus-sampling are divided by all centres and cannot be added")
-        return PairSums(self.edges, self.moments + other.moments)
+        border = None
+        if self.border is not None and other.border is not None:
+            border = self.border + other.border
+        return PairSums(self.edges, self.moments + other.moments, border)
 
     def up_to(self, radii: Floats) -> Floats:
         """Sum of w over pairs not further apart than each radius; radii must be class limits."""
@@ -130,10 +133,6 @@ def pair_sums(
     elif edge_weight in ("translation", "rigid-motion"):
         work, columns = _shifted(points, classes, area, largest, edge_weight, workers), 3
     elif edge_weight == "minus-sampling":
-        if first is not None:
-            raise not_allowed(
-                "first", "left out with minus-sampling, which needs all centres at once", "some"
-            )
         work, columns = _deep(points, classes, area, limits, workers), 4
     else:
         raise not_allowed("edge_weight", EDGE_WEIGHTS, edge_weight)
@@ -214,17 +213,17 @@ def _deep(
 ) -> Work:
     """Pairs whose first point is no nearer to the boundary than to the second."""
     largest = float(limits[-1])
-    depth = depths(points.x, points.y, area, largest, workers)
-    known = points._replace(depth=depth)
-    ordered, tail = depth_sums(depth, points.weight if len(points.weight) else None)
+    known = points._replace(depth=_depths(points.x, points.y, area, largest, workers))
+    at = np.linspace(0.0, largest, ERODED_STEPS + 1)
+    eroded = np.ascontiguousarray((area.eroded_area(largest)(at) / area.area)[:, None])
 
     def work(low: int, high: int, out: Floats) -> None:
-        _weighted_pairs.add_deep_pairs(known, classes, limits, ordered, tail, low, high, out)
+        _weighted_pairs.add_deep_pairs(known, classes, limits, eroded, ERODED_STEPS / largest, low, high, out)
 
     return work
 
 
-def depths(x: Floats, y: Floats, area: StudyArea, largest: float, workers: int | None = None) -> Floats:
+def _depths(x: Floats, y: Floats, area: StudyArea, largest: float, workers: int | None = None) -> Floats:
     """Distance of points (local coordinates) to the boundary, capped at `largest`."""
     grid, deep = area.grid, _deep_cells(area, largest)
     out = np.empty(len(x))
@@ -235,16 +234,6 @@ def depths(x: Floats, y: Floats, area: StudyArea, largest: float, workers: int |
     for _ in in_order(work, portions(len(x)), workers):
         pass
     return out
-
-
-def depth_sums(depth: Floats, factors: Floats | None) -> tuple[Floats, Floats]:
-    """Depths in increasing order, and the sums of the factors from each of them on, (n + 1,)."""
-    order = np.argsort(depth, kind="stable")
-    ordered = depth[order]
-    each = np.ones(len(depth)) if factors is None else factors[order]
-    tail = np.zeros(len(depth) + 1)
-    tail[:-1] = np.cumsum(each[::-1])[::-1]
-    return ordered, tail
 
 
 def _deep_cells(area: StudyArea, largest: float) -> npt.NDArray[np.bool_]:

@@ -15,8 +15,6 @@ from geoclust.curves.pair_sums import (
     EDGE_WEIGHTS,
     PairSums,
     class_limits,
-    depth_sums,
-    depths,
     pair_sums,
 )
 from geoclust.errors import InputError, not_allowed
@@ -50,7 +48,7 @@ def k_function(
     edge_weight
         ``isotropic`` (Ripley 1977, with the divisor of Ohser 1983), ``translation``
         (Ohser & Stoyan 1981), ``rigid-motion`` (Ohser 1983), ``minus-sampling`` (only
-        centres further than r from the boundary) or ``unweighted``.
+        centres further than r from the boundary, over the area that is) or ``unweighted``.
     intensity_at_points
         (n,) intensity at each point, m⁻², for the inhomogeneous K function (Baddeley,
         Møller & Waagepetersen 2000, Statistica Neerlandica 54: 329-350). Pairs count
@@ -161,9 +159,9 @@ class SecondOrder:
         What the point factors add up to over all ordered pairs; n(n-1) if all are one.
     reach
         (c,) the window at the limits of the pair sums.
-    centres
-        For minus-sampling: (k,) factors of all points deeper than each radius, of
-        those deeper than a radius and the bandwidth, and (1,) of all points.
+    deeper
+        For minus-sampling: (k,) square metres deeper than each radius, and deeper than
+        each radius and the bandwidth together.
     """
 
     sums: PairSums
@@ -175,7 +173,7 @@ class SecondOrder:
     bandwidth: float | None
     pairs: float
     reach: Floats | None = None
-    centres: tuple[Floats, Floats, float] | None = None
+    deeper: tuple[Floats, Floats] | None = None
 
     @classmethod
     def measure(
@@ -233,20 +231,13 @@ class SecondOrder:
         else:
             pairs = float(point_weights.sum() ** 2 - (point_weights**2).sum())
         window = np.interp(radii, limits, reach, left=area.area) if varies else np.full(len(radii), area.area)
-        centres = None
+        deeper = None
         if edge_weight == "minus-sampling":
-            x, y = np.ascontiguousarray(local_xy[:, 0]), np.ascontiguousarray(local_xy[:, 1])
-            largest = float(limits[-1])
-            ordered, tail = depth_sums(depths(x, y, area, largest, workers), point_weights)
-            wide = np.minimum(radii + (bandwidth or 0.0), largest)
-            centres = (
-                tail[np.searchsorted(ordered, radii)],
-                tail[np.searchsorted(ordered, wide)],
-                float(tail[0]),
-            )
+            eroded = area.eroded_area(float(limits[-1]))
+            deeper = (eroded(radii), eroded(radii + (bandwidth or 0.0)))
         return cls(
             sums, radii, n, window, area.area, edge_weight, bandwidth, pairs,
-            reach if varies else None, centres,
+            reach if varies else None, deeper,
         )  # fmt: skip
 
     @property
@@ -267,9 +258,9 @@ class SecondOrder:
         """(k,) estimate of K in square metres."""
         sums = self._divided()
         counted = sums.up_to(np.where(self.radii > 0, self.radii, sums.edges[0]))
-        if self.centres is not None:
-            deeper, _, every = self.centres
-            return np.asarray(counted * self._scale * every / np.where(deeper > 0, deeper, np.nan))
+        if self.deeper is not None:
+            deep = self.deeper[0]
+            counted = counted * self.area / np.where(deep > 0, deep, np.nan)
         return np.asarray(counted * self._scale)
 
     def g_values(self) -> Floats:
@@ -280,9 +271,9 @@ class SecondOrder:
         z = np.clip(self.radii / self.bandwidth, 0.0, 1.0)
         above = 0.5 + 0.75 * (z - z**3 / 3.0)
         values = summed * self._scale / (2.0 * np.pi * above)
-        if self.centres is not None:
-            _, deeper, every = self.centres
-            values = values * np.where(deeper > 0, every, np.nan)
+        if self.deeper is not None:
+            # where the kernel reaches beyond the deepest point, a part of it has no data
+            values = np.where(self.deeper[1] > 0, values, np.nan)
         return np.asarray(values)
 
     def k(self) -> Curve:
