@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import secrets
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
@@ -22,6 +22,7 @@ from geoclust.curves.second_order import default_radii, k_function
 from geoclust.errors import CannotTell, OutputError, UsageError, not_allowed
 from geoclust.fitting.fit import fit_clusters
 from geoclust.fitting.result import ClusterFit
+from geoclust.intensity.covariates import Covariate
 from geoclust.layers import styles
 from geoclust.layers.columns import with_our_columns
 from geoclust.layers.package import PatternWriter, write_package
@@ -30,9 +31,10 @@ from geoclust.layers.results_folder import results_folder
 from geoclust.layers.survey_layers import PathLike, read_polygons, read_survey_layers
 from geoclust.models.catalogue import model_by_name
 from geoclust.report.page import write_page
-from geoclust.report.record import fit_record, library_versions, write_record
+from geoclust.report.record import add_terrain, fit_record, library_versions, write_record
 from geoclust.seeds import stream
 from geoclust.simulation.patterns import simulate_patterns
+from geoclust.terrain import RASTER, Terrain, explain, read_covariates
 
 Progress = Callable[[str, int, int], None]
 
@@ -110,6 +112,8 @@ class Analysis:
         ``ok``, or why the data cannot tell, and the sentence.
     survey, envelopes, fit, centres
         Results of the steps; None where a step had nothing to say.
+    terrain
+        What covariates explain, if there were any.
     choices, seed
         What was chosen on the way.
     out
@@ -126,6 +130,7 @@ class Analysis:
     seed: int
     out: Path
     notes: list[str] = field(default_factory=list)
+    terrain: Terrain | None = None
 
     def lines(self) -> list[str]:
         """The answer in a few lines of text."""
@@ -136,6 +141,8 @@ class Analysis:
         if "L" in self.envelopes:
             test = self.envelopes["L"]
             out.append(f"complete randomness: p = {test.p_value:.3g} ({test.simulations} simulations, L)")
+        if self.terrain is not None:
+            out += self.terrain.lines()
         if self.fit is not None and self.status == "ok":
             for p in self.fit.model.described:
                 factor, unit = (1e4, "ha⁻¹") if p.per_area else (1.0, "" if p.unit == "1" else p.unit)
@@ -161,12 +168,13 @@ class Analysis:
 
 @dataclass(frozen=True)
 class Extras:
-    """What was given beside the survey: zones, parts not walked, a template grid, and warnings about them."""
+    """What was given beside the survey: zones, parts not walked, template grid, covariates; warnings."""
 
     zones: gpd.GeoDataFrame | None
     unsurveyed: gpd.GeoDataFrame | None
     grid: Grid | None
     warnings: list[str]
+    covariates: list[Covariate] = field(default_factory=list)
 
 
 def analyse(
@@ -177,6 +185,7 @@ def analyse(
     points_layer: str | None = None,
     area_layer: str | None = None,
     model: str = "thomas",
+    covariates: Sequence[PathLike] = (),
     zones: PathLike | None = None,
     zones_layer: str | None = None,
     unsurveyed: PathLike | None = None,
@@ -206,6 +215,9 @@ def analyse(
         Folder for the results; it appears whole at the end or not at all.
     model
         Name of the cluster model.
+    covariates
+        Rasters that may explain where points are; every band is one. The clusters are then those
+        beyond them.
     zones, zones_layer
         Polygons to give numbers of points and centres for.
     unsurveyed, unsurveyed_layer
@@ -248,6 +260,7 @@ def analyse(
             y_column=y_column, metric_crs=metric_crs, repair=repair,
         )  # fmt: skip
         extras = read_extras(survey, zones, zones_layer, unsurveyed, unsurveyed_layer, like, crs, repair)
+        extras.covariates.extend(read_covariates(covariates, survey.area))
         found = _analyse_survey(
             survey, extras, model=model, cell=cell, seed=used_seed, simulations=simulations,
             workers=workers, progress=progress, out=Path(out),
@@ -313,8 +326,18 @@ def _analyse_survey(
         )
         choices["r_max_m"] = float(radii[-1])
         choices["bandwidth_m"] = envelopes["g"].curve.bandwidth
+    terrain: Terrain | None = None
+    if extras.covariates:
+        terrain = explain(
+            survey, extras.covariates, default_radii(survey.area), simulations=simulations,
+            rng=stream(seed, "terrain"), workers=workers, progress=progress,
+        )  # fmt: skip
+        choices["covariates"] = [c.name for c in extras.covariates]
     try:
-        fit = fit_clusters(survey, model, rng=fit_seed, workers=workers, progress=progress)
+        fit = fit_clusters(
+            survey, model, intensity=None if terrain is None else terrain.intensity, rng=fit_seed,
+            workers=workers, progress=progress,
+        )  # fmt: skip
         status, reason = fit.status, fit.reason
         if fit.ok:
             centres = locate_centres(
@@ -324,7 +347,7 @@ def _analyse_survey(
     except CannotTell as verdict:
         status, reason = verdict.status, str(verdict)
     return Analysis(
-        status, reason, survey, envelopes, fit, centres, choices, seed, out, list(extras.warnings)
+        status, reason, survey, envelopes, fit, centres, choices, seed, out, list(extras.warnings), terrain
     )
 
 
@@ -361,9 +384,14 @@ def _write_all(
         status=found.status, reason=found.reason, fit=fit, envelopes=found.envelopes, centres=centres,
         audit=survey.audit, choices=found.choices, seed=found.seed,
     )  # fmt: skip
+    terrain = found.terrain
+    if terrain is not None:
+        add_terrain(record, terrain.intensity, terrain.envelopes)
     write_record(folder / "fit.json", record)
     try:
-        curve_table(found.envelopes, fit, survey).to_csv(folder / "curves.csv", index=False)
+        table = curve_table(found.envelopes, fit, survey)
+        frames = [] if terrain is None else terrain.frames()
+        pd.concat([table, *frames], ignore_index=True).to_csv(folder / "curves.csv", index=False)
     except OSError as error:
         raise OutputError(f"curves.csv could not be written: {error.strerror}.") from error
     package = folder / "results.gpkg"
@@ -378,6 +406,9 @@ def _write_all(
         )
     files = [(name, meaning) for name, meaning in FILES if centres is not None or name[-4:] != ".tif"]
     sheets = styles.vector_styles()
+    if terrain is not None:
+        sheets |= terrain.write(folder, survey, extras.grid)
+        files.insert(2, (RASTER, "raster of points per hectare that covariates explain, and residuals"))
     if centres is not None:
         centres.write(folder / "centre_intensity.tif")
         sheets["centre_intensity"] = styles.centre_intensity_style(centres.mean)
@@ -394,6 +425,7 @@ def _write_all(
         status=found.status,
         reason=found.reason,
         centres=centres,
+        terrain=None if terrain is None else (terrain.intensity, terrain.envelopes),
         choices=found.choices | {"seed": found.seed},
         versions=library_versions(),
         command=command,
@@ -410,7 +442,7 @@ def write_layers(path: Path, found: Analysis, extras: Extras) -> dict[str, dict[
     if attributes is None:
         attributes = gpd.GeoDataFrame(geometry=gpd.points_from_xy(*survey.xy.T), crs=survey.area.crs)
     if centres is not None:
-        ours: dict[str, Any] = {name: centres.points[name].to_numpy() for name in centres.points}
+        ours: dict[str, Any] = {str(name): centres.points[name].to_numpy() for name in centres.points}
     else:
         nothing = np.full(survey.n, np.nan)
         ours = {

@@ -18,7 +18,7 @@ from geoclust.errors import CannotTell
 @click.command(short_help="The whole job: layers in, a folder with maps and a report out.")
 @survey_arguments
 @out_option("Folder for the results; it appears whole at the end, or not at all.", required=True, folder=True)
-@takes("model", *PLACES, "like", "cell", "simulations", *READING, "seed", "overwrite", *RUNNING)
+@takes("model", "covariate", *PLACES, "like", "cell", "simulations", *READING, "seed", "overwrite", *RUNNING)
 @click.option("--title", metavar="TEXT", show_default="the name of POINTS", help="Heading of the report.")
 @click.pass_obj
 def analyse(
@@ -29,6 +29,7 @@ def analyse(
     zones_layer: str | None,
     unsurveyed: str | None,
     unsurveyed_layer: str | None,
+    covariate: tuple[Path, ...],
     seed: int | None,
     quiet: bool,
     **options: Any,
@@ -47,7 +48,7 @@ def analyse(
         found = workflow.analyse(
             points, area, zones=zone_file, zones_layer=zone_layer, unsurveyed=beyond_file,
             unsurveyed_layer=beyond_layer, seed=used, progress=talk.progress,
-            command=shlex.join(["geoclust", *given]), **options,
+            covariates=covariate, command=shlex.join(["geoclust", *given]), **options,
         )  # fmt: skip
         talk.say(f"seed {used}")
         click.echo("\n".join(found.lines()))

@@ -97,6 +97,9 @@ _DECLARED = (
            kind=str, metavar="LAYER", otherwise="none"),
     Option("--unsurveyed-layer", "Layer of the file given by --unsurveyed.", kind=str, metavar="NAME",
            otherwise="its only polygon layer"),
+    Option("--covariate", "Raster that may explain where points are, such as elevation; each band is one. "
+                          "May be repeated. Clusters are then those beyond it.",
+           kind=_PATH, metavar="RASTER", many=True, default=(), otherwise="none"),
     # the maps
     Option("--like", "Template raster: the maps follow its grid. Not together with --cell.", kind=_PATH,
            metavar="RASTER", otherwise="none"),

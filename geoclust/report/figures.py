@@ -47,7 +47,7 @@ def curve_figure(test: EnvelopeTest, *, fit: ClusterFit | None = None) -> Figure
             span = _span(curve.values - off, curve.upper - off, curve.lower - off)
             low = np.where(np.isfinite(curve.lower), curve.lower - off, span[0])
             high = np.where(np.isfinite(curve.upper), curve.upper - off, span[1])
-            ax.fill_between(r, low, high, color=canvas.BAND, lw=0, label="range of complete randomness")
+            ax.fill_between(r, low, high, color=canvas.BAND, lw=0, label=_band_label(test))
         ax.plot(r, curve.theory - off, color=canvas.INK, lw=0.9, ls=(0, (4, 3)), label="expected at random")
         if fit is not None:
             modelled = {"L": fit.model.l_function, "g": fit.model.pair_correlation, "K": fit.model.k_function}
@@ -68,6 +68,12 @@ def curve_figure(test: EnvelopeTest, *, fit: ClusterFit | None = None) -> Figure
                            curve.theory - off, *_finite_limits(test, off)))  # fmt: skip
         ax.legend(loc="upper right", handlelength=1.6)
         return figure
+
+
+def _band_label(test: EnvelopeTest) -> str:
+    if test.curve.intensity is None:
+        return "range of complete randomness"
+    return "range of what covariates explain"
 
 
 def contrast_figure(fit: ClusterFit) -> Figure | None:

@@ -13,7 +13,7 @@ from markupsafe import Markup, escape
 
 from geoclust.errors import OutputError
 from geoclust.layers.audit import area_text
-from geoclust.report import answer, canvas, figures, maps, method, tables, words
+from geoclust.report import answer, canvas, effects, figures, maps, method, tables, words
 
 if TYPE_CHECKING:
     from matplotlib.figure import Figure
@@ -22,6 +22,7 @@ if TYPE_CHECKING:
     from geoclust.centres.result import CentreMap
     from geoclust.curves.envelopes import EnvelopeTest
     from geoclust.fitting.result import ClusterFit
+    from geoclust.intensity.loglinear import LogLinearIntensity
     from geoclust.layers.audit import Audit
 
 
@@ -65,6 +66,7 @@ def write_page(
     command: str | None,
     title: str,
     files: Sequence[tuple[str, str]],
+    terrain: tuple[LogLinearIntensity, Mapping[str, EnvelopeTest]] | None = None,
 ) -> None:
     """Write the page.
 
@@ -86,6 +88,8 @@ def write_page(
         Heading of the page.
     files
         Name and meaning of each file in the folder.
+    terrain
+        Intensity on covariates, and the tests beyond it.
 
     Raises
     ------
@@ -105,7 +109,10 @@ def write_page(
         ),
         facts=_facts(survey, audit),
         maps=_maps(pictures, survey, shown),
-        charts=_charts(pictures, envelopes, fit, ok, shown),
+        charts=_charts(pictures, envelopes, fit, ok, shown, terrain),
+        effects=None if terrain is None else effects.effect_table(terrain[0]),
+        beyond=None if terrain is None else effects.reading(terrain[1]),
+        uncovered=[] if terrain is None else terrain[0].notes(),
         parameters=tables.parameter_table(fit, survey, shown) if fit is not None else None,
         zones=_polygon_table(shown, "zones", "zone"),
         unsurveyed=_polygon_table(shown, "unsurveyed", "part"),
@@ -231,6 +238,7 @@ def _charts(
     fit: ClusterFit | None,
     ok: bool,
     centres: CentreMap | None,
+    terrain: tuple[LogLinearIntensity, Mapping[str, EnvelopeTest]] | None = None,
 ) -> list[Picture]:
     found = []
     readings = {
@@ -243,13 +251,23 @@ def _charts(
     }
     for name, test in (envelopes or {}).items():
         if name in readings:
-            modelled = "; the golden broken line is the fitted model" if ok else ""
+            modelled = "; the golden broken line is the fitted model" if ok and terrain is None else ""
             reading = (
                 readings[name].rstrip(".")
                 + f"{modelled} ({test.level * 100:g} % of random patterns stay inside the band everywhere)."
             )
             alt = f"Curve {name} with its envelope of complete randomness, p = {test.p_value:.3g}."
-            found.append(pictures.take(figures.curve_figure(test, fit=fit if ok else None), alt, reading))
+            # the clusters of a fit beyond covariates are those of the weighted curve
+            drawn = fit if ok and terrain is None else None
+            found.append(pictures.take(figures.curve_figure(test, fit=drawn), alt, reading))
+    if terrain is not None and "g" in terrain[1]:
+        test = terrain[1]["g"]
+        alt = f"Curve g weighted by the intensity, with its envelope, p = {test.p_value:.3g}."
+        reading = (
+            "Pairs beyond the covariates: as before, with every pair weighted by how many points the "
+            "covariates let expect at its two places; above the band, points gather for other reasons."
+        )
+        found.append(pictures.take(figures.curve_figure(test, fit=fit if ok else None), alt, reading))
     if fit is not None:
         surface = figures.contrast_figure(fit)
         if surface is not None:

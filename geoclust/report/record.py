@@ -15,6 +15,7 @@ from geoclust.centres.result import CentreMap
 from geoclust.curves.envelopes import EnvelopeTest
 from geoclust.errors import OutputError
 from geoclust.fitting.result import ClusterFit
+from geoclust.intensity.loglinear import LogLinearIntensity
 from geoclust.layers.audit import Audit
 
 SCHEMA_VERSION = "1.0"
@@ -91,12 +92,7 @@ def fit_record(
                 "meaning": p.meaning,
             }
     for name, test in (envelopes or {}).items():
-        out["tests"][f"complete randomness, {name}"] = {
-            "p_value": test.p_value,
-            "simulations": test.simulations,
-            "alternative": test.alternative,
-            "departures_m": [list(d) for d in test.departures()],
-        }
+        out["tests"][f"complete randomness, {name}"] = _test(test)
     if centres is not None:
         mean, low, high = centres.interval_inside()
         out["centres"] = {
@@ -116,6 +112,24 @@ def fit_record(
                 {"role": role, "file": source.file, "layer": source.layer, "sha256": source.sha256}
             )
     return plain(out)
+
+
+def add_terrain(
+    record: dict[str, Any], intensity: LogLinearIntensity, envelopes: Mapping[str, EnvelopeTest]
+) -> None:
+    """Add the intensity that covariates explain, and the tests beyond it, to the content of fit.json."""
+    record["intensity"] = plain(intensity.record())
+    for name, test in envelopes.items():
+        record["tests"][f"fitted intensity, {name}"] = plain(_test(test))
+
+
+def _test(test: EnvelopeTest) -> dict[str, object]:
+    return {
+        "p_value": test.p_value,
+        "simulations": test.simulations,
+        "alternative": test.alternative,
+        "departures_m": [list(d) for d in test.departures()],
+    }
 
 
 def write_record(path: str | Path, record: Mapping[str, Any]) -> None:

@@ -65,6 +65,11 @@ def _record(path: str | Path) -> dict[str, Any]:
     needed = {"schema", "status", "reason", "model", "parameters", "choices", "method", "seed"}
     if not isinstance(record, dict) or not needed <= set(record):
         raise InputError(f"{path} is no fit written by geoclust; give the fit.json of an earlier run.")
+    if record.get("intensity") is not None:
+        raise InputError(
+            f"{path} holds a fit beyond covariates, which cannot be taken over without them; give the "
+            "covariates to geoclust analyse."
+        )
     if str(record["schema"]).split(".")[0] != SCHEMA_VERSION.split(".")[0]:
         raise InputError(
             f"{path} was written in version {record['schema']} of its schema, this program reads "
