@@ -21,7 +21,8 @@ def _polygon_part(geometry: shapely.Geometry) -> shapely.MultiPolygon:
         g for g in shapely.get_parts(shapely.make_valid(geometry))
         if isinstance(g, shapely.Polygon | shapely.MultiPolygon) and g.area > 0
     ]  # fmt: skip
-    return shapely.multipolygons([p for g in parts for p in shapely.get_parts(g)])
+    # the constructor takes an empty list, where nothing is left; the array function does not
+    return shapely.MultiPolygon([p for g in parts for p in shapely.get_parts(g)])
 
 
 def _areas(geometries: gpd.GeoSeries, area: StudyArea) -> list[StudyArea | None]:
