@@ -7,7 +7,7 @@ import itertools
 import numpy as np
 import pytest
 import shapely
-from scipy.integrate import dblquad, quad
+from scipy.integrate import quad
 from scipy.stats import kstest
 
 from geoclust.area.study_area import StudyArea
@@ -83,18 +83,19 @@ def test_sibling_distribution_is_the_integral_of_the_density(model):
 
 @pytest.mark.parametrize("r", [4.0, 20.0, 45.0])
 def test_siblings_differ_by_two_independent_offsets(model, r):
-    """h is the density of the offspring folded with itself, by quadrature in the plane."""
+    """h is the density of the offspring folded with itself, by midpoint sums in polar coordinates.
 
-    def product(angle: float, at: float) -> float:
-        other = np.sqrt(at * at + r * r - 2 * at * r * np.cos(angle))
-        return 2 * at * float(model.offspring_density(at)) * float(model.offspring_density(other))
-
-    # jumps of a density that is cut off limit the quadrature, not the formula
-    folded = sum(
-        dblquad(product, a, b, 0.0, np.pi, epsabs=1e-9, epsrel=1e-5)[0]
-        for a, b in [(0.0, 10.0), (10.0, 40.0), (40.0, 120.0), (120.0, 1500.0)]
-    )
-    assert folded == pytest.approx(float(model.sibling_density(r)), rel=3e-3, abs=2e-8)
+    1,500 distances crowded towards the centre, 400 directions: good to some
+    thousandths also where a density ends in a step.
+    """
+    t = (np.arange(1500) + 0.5) / 1500
+    at = 25.0 * t / (1 - t)
+    width = 25.0 / (1 - t) ** 2 / 1500
+    angles = np.pi * (np.arange(400) + 0.5) / 400
+    other = np.sqrt(at[:, None] ** 2 + r * r - 2 * r * at[:, None] * np.cos(angles))
+    mean = model.offspring_density(other).mean(axis=1)
+    folded = np.sum(2 * np.pi * at * width * model.offspring_density(at) * mean)
+    assert folded == pytest.approx(float(model.sibling_density(r)), rel=5e-3, abs=1e-8)
 
 
 def test_pair_correlation_and_k_follow_from_the_siblings(model):
