@@ -14,6 +14,7 @@ if TYPE_CHECKING:
     from geoclust.area.survey import Survey
     from geoclust.centres.locate import locate_centres
     from geoclust.centres.result import CentreMap
+    from geoclust.curves.bandwidth import cross_validated_bandwidth
     from geoclust.curves.curve import Curve
     from geoclust.curves.envelopes import global_envelope, randomness_envelopes
     from geoclust.curves.nearest import empty_space_function, j_function, nearest_neighbour_function
@@ -23,10 +24,15 @@ if TYPE_CHECKING:
     from geoclust.errors import CannotTell, GeoclustError, InputError, OutputError, UsageError
     from geoclust.fitting.fit import fit_clusters
     from geoclust.fitting.result import ClusterFit
+    from geoclust.intensity.covariates import DistanceCovariate, RasterCovariate, coordinate_covariates
+    from geoclust.intensity.envelopes import inhomogeneous_envelopes
+    from geoclust.intensity.kernel import KernelIntensity, kernel_intensity
+    from geoclust.intensity.loglinear import LogLinearIntensity, fit_intensity
     from geoclust.layers.survey_layers import audit_survey
     from geoclust.models.matern_cluster import MaternCluster
     from geoclust.models.thomas import Thomas
     from geoclust.simulation.patterns import simulate_patterns
+    from geoclust.terrain import read_covariates
     from geoclust.workflow import analyse, read_survey
 
 # loaded when they are first used: `geoclust --help` need not wait for compilers and geometry
@@ -59,6 +65,16 @@ _HOMES = {
     "MaternCluster": "geoclust.models.matern_cluster",
     "Thomas": "geoclust.models.thomas",
     "simulate_patterns": "geoclust.simulation.patterns",
+    "fit_intensity": "geoclust.intensity.loglinear",
+    "LogLinearIntensity": "geoclust.intensity.loglinear",
+    "KernelIntensity": "geoclust.intensity.kernel",
+    "kernel_intensity": "geoclust.intensity.kernel",
+    "inhomogeneous_envelopes": "geoclust.intensity.envelopes",
+    "cross_validated_bandwidth": "geoclust.curves.bandwidth",
+    "RasterCovariate": "geoclust.intensity.covariates",
+    "DistanceCovariate": "geoclust.intensity.covariates",
+    "coordinate_covariates": "geoclust.intensity.covariates",
+    "read_covariates": "geoclust.terrain",
     "analyse": "geoclust.workflow",
     "read_survey": "geoclust.workflow",
 }
@@ -68,9 +84,14 @@ __all__ = [
     "CentreMap",
     "ClusterFit",
     "Curve",
+    "DistanceCovariate",
     "GeoclustError",
     "InputError",
+    "KernelIntensity",
+    "LogLinearIntensity",
+    "MaternCluster",
     "OutputError",
+    "RasterCovariate",
     "StudyArea",
     "Survey",
     "Thomas",
@@ -79,12 +100,17 @@ __all__ = [
     "analyse",
     "audit_survey",
     "clark_evans_test",
+    "coordinate_covariates",
+    "cross_validated_bandwidth",
     "dispersion",
     "empty_space_function",
     "fit_clusters",
+    "fit_intensity",
     "global_envelope",
+    "inhomogeneous_envelopes",
     "j_function",
     "k_function",
+    "kernel_intensity",
     "l_function",
     "locate_centres",
     "loosmore_ford_test",
@@ -92,6 +118,7 @@ __all__ = [
     "pair_correlation",
     "quadrat_test",
     "randomness_envelopes",
+    "read_covariates",
     "read_survey",
     "simulate_patterns",
 ]

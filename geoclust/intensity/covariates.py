@@ -214,7 +214,7 @@ class CoordinateCovariate(Covariate):
         return super().record(cells) | {"kind": "coordinates", "origin_m": self.origin.tolist()}
 
 
-def trend(area: StudyArea, degree: int = 1) -> list[Covariate]:
+def coordinate_covariates(area: StudyArea, degree: int = 1) -> list[Covariate]:
     """Coordinates as covariates: 1 a plane, 2 with squares and the product."""
     if degree not in (1, 2):
         raise not_allowed("degree", "1 or 2", degree)

@@ -15,7 +15,7 @@ from geoclust.curves.bandwidth import cross_validated_bandwidth
 from geoclust.curves.envelopes import randomness_envelopes
 from geoclust.curves.second_order import pair_correlation
 from geoclust.errors import InputError, UsageError
-from geoclust.intensity.covariates import trend
+from geoclust.intensity.covariates import coordinate_covariates
 from geoclust.intensity.envelopes import inhomogeneous_envelopes
 from geoclust.intensity.kernel import kernel_intensity
 from geoclust.intensity.loglinear import fit_intensity
@@ -48,7 +48,7 @@ def test_terrain_alone_is_structure_for_one_test_and_none_for_the_other():
     survey = terrain_only()
     plain = randomness_envelopes(survey, RADII, simulations=99, rng=1)
     assert plain["L"].p_value == 0.01
-    intensity = fit_intensity(survey, trend(AREA), clustered=False, cell=10.0)
+    intensity = fit_intensity(survey, coordinate_covariates(AREA), clustered=False, cell=10.0)
     found = inhomogeneous_envelopes(survey, intensity, RADII, simulations=99, rng=1)
     assert found["L"].p_value > 0.05
     assert found["g"].p_value > 0.05
@@ -59,7 +59,7 @@ def test_terrain_alone_is_structure_for_one_test_and_none_for_the_other():
 
 def test_clusters_are_seen_beyond_the_terrain():
     survey = terrain_and_clusters()
-    intensity = fit_intensity(survey, trend(AREA))
+    intensity = fit_intensity(survey, coordinate_covariates(AREA))
     # to the east by -2 a kilometre
     low, high = intensity.intervals()["easting_km"]
     assert low < -2.0 < high
@@ -78,7 +78,7 @@ def test_clusters_are_seen_beyond_the_terrain():
 
 def test_the_errors_of_the_fit_are_in_the_envelope():
     survey = terrain_only()
-    intensity = fit_intensity(survey, trend(AREA, 2), clustered=False)
+    intensity = fit_intensity(survey, coordinate_covariates(AREA, 2), clustered=False)
     upper = [
         inhomogeneous_envelopes(
             survey, intensity, RADII, functions=("L",), simulations=39, refit=refit, rng=3
@@ -90,7 +90,7 @@ def test_the_errors_of_the_fit_are_in_the_envelope():
 
 def test_workers_do_not_change_the_answer():
     survey = terrain_only()
-    intensity = fit_intensity(survey, trend(AREA), form="logistic", clustered=False, rng=1)
+    intensity = fit_intensity(survey, coordinate_covariates(AREA), form="logistic", clustered=False, rng=1)
     one, three = (
         inhomogeneous_envelopes(survey, intensity, RADII, simulations=39, rng=5, workers=w) for w in (1, 3)
     )

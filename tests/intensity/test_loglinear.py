@@ -21,7 +21,7 @@ from geoclust.area.survey import Survey
 from geoclust.errors import InputError, UsageError
 from geoclust.intensity.cells import Cells
 from geoclust.intensity.clustering import Clustering, cell_pair_means, excess_matrix, fit_clustering
-from geoclust.intensity.covariates import DistanceCovariate, RasterCovariate, trend
+from geoclust.intensity.covariates import DistanceCovariate, RasterCovariate, coordinate_covariates
 from geoclust.intensity.loglinear import Quadrature, fit_intensity
 from geoclust.intensity.regression import logistic_regression
 from geoclust.layers.covariates import read_covariate_bands
@@ -258,9 +258,9 @@ def test_distances_and_coordinates():
     distance = DistanceCovariate("distance_to_water_m", pond)
     at = survey.xy[:50]
     assert np.allclose(distance.at(at), shapely.distance(pond, shapely.points(at)), rtol=1e-12)
-    plane = trend(survey.area)
+    plane = coordinate_covariates(survey.area)
     assert [c.name for c in plane] == ["easting_km", "northing_km"]
-    assert [c.name for c in trend(survey.area, 2)][2:] == [
+    assert [c.name for c in coordinate_covariates(survey.area, 2)][2:] == [
         "easting2_km2", "easting_northing_km2", "northing2_km2",
     ]  # fmt: skip
     assert np.allclose(plane[0].at(survey.xy) * 1000, survey.xy[:, 0] - survey.area.origin[0])
