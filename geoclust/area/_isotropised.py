@@ -79,7 +79,10 @@ def side_within(ax, ay, bx, by, r):
     if t1 <= t0:
         return 0.25 * r2 * whole
     a2, b2 = h * h + t0 * t0, h * h + t1 * t1
-    turn = np.arctan2(h * (t1 - t0), h * h + t0 * t1)
+    if t0 == ta and t1 == tb:
+        turn = whole
+    else:
+        turn = np.arctan2(h * (t1 - t0), h * h + t0 * t1)
     # int (rho^2/2) (ln(r/rho) + 1/2) d theta over the part of the side within r
     moment = 0.0
     if b2 > 0.0:
@@ -88,6 +91,50 @@ def side_within(ax, ay, bx, by, r):
         moment -= 0.5 * t0 * np.log(a2 / r2)
     moment += h * turn - (t1 - t0)
     return -0.5 * h * moment + 0.25 * h * (t1 - t0) + 0.25 * r2 * (whole - turn)
+
+
+@njit(nogil=True, cache=True, inline="always")
+def log_ratio(a, b):
+    """ln(a / b), by its series where the two are close."""
+    z = (a - b) / (a + b)
+    if abs(z) > 0.03:
+        return np.log(a / b)
+    y = z * z
+    return 2.0 * z * (1.0 + y * (1.0 / 3.0 + y * (0.2 + y * (1.0 / 7.0 + y / 9.0))))
+
+
+@njit(nogil=True, cache=True)
+def far_side_within(ax, ay, bx, by, r):
+    """`side_within` without the sector of radius r, for a shape that does not hold the origin.
+
+    The sectors of all sides then cancel, and sides beyond r need nothing at all.
+    """
+    ux, uy = bx - ax, by - ay
+    length2 = ux * ux + uy * uy
+    cross = ax * by - ay * bx
+    r2 = r * r
+    if length2 == 0.0 or cross * cross >= r2 * length2:
+        return 0.0
+    length = np.sqrt(length2)
+    h = cross / length
+    ta = (ax * ux + ay * uy) / length
+    span = np.sqrt(r2 - h * h)
+    t0, t1 = max(ta, -span), min(ta + length, span)
+    if t1 <= t0:
+        return 0.0
+    x, y = h * (t1 - t0), h * h + t0 * t1
+    z = x / y if y > 0.0 else 1.0
+    if abs(z) > 0.05:
+        turn = np.arctan2(x, y)
+    else:
+        w = z * z
+        turn = z * (1.0 - w * (1.0 / 3.0 - w * (0.2 - w * (1.0 / 7.0 - w / 9.0))))
+    moment = (
+        0.5 * (t1 * log_ratio(h * h + t1 * t1, r2) - t0 * log_ratio(h * h + t0 * t0, r2))
+        + h * turn
+        - (t1 - t0)
+    )
+    return -0.5 * h * moment + 0.25 * h * (t1 - t0) - 0.25 * r2 * turn
 
 
 @njit(nogil=True, cache=True)
@@ -156,14 +203,24 @@ def parallel_pair(ax0, ay0, ax1, ay1, bx0, by0, bx1, by1, r):
 
 
 @njit(nogil=True, cache=True)
-def slanted_pair(ax0, ay0, ax1, ay1, bx0, by0, bx1, by1, sine, r):
-    """J over the product of lengths, for edges with cross product `sine`; integral of ln if r is zero."""
+def slanted_pair(ax0, ay0, ax1, ay1, bx0, by0, bx1, by1, sine, r, apart):
+    """J over the product of lengths, for edges with cross product `sine`; integral of ln if r is zero.
+
+    `apart` tells that the edges are far from each other.
+    """
     # corners of all differences, in an order that is counter-clockwise if sine < 0
     x00, y00 = ax0 - bx0, ay0 - by0
     x10, y10 = ax1 - bx0, ay1 - by0
     x11, y11 = ax1 - bx1, ay1 - by1
     x01, y01 = ax0 - bx1, ay0 - by1
-    if r > 0.0:
+    if apart and r > 0.0:
+        total = (
+            far_side_within(x00, y00, x10, y10, r)
+            + far_side_within(x10, y10, x11, y11, r)
+            + far_side_within(x11, y11, x01, y01, r)
+            + far_side_within(x01, y01, x00, y00, r)
+        )
+    elif r > 0.0:
         total = (
             side_within(x00, y00, x10, y10, r)
             + side_within(x10, y10, x11, y11, r)
@@ -182,8 +239,8 @@ def slanted_pair(ax0, ay0, ax1, ay1, bx0, by0, bx1, by1, sine, r):
 
 
 @njit(nogil=True, cache=True)
-def add_pair(ax0, ay0, ax1, ay1, bx0, by0, bx1, by1, factor, radii, exact, flat, logs):
-    """Add one pair of edges to the sums.
+def add_pair(ax0, ay0, ax1, ay1, bx0, by0, bx1, by1, factor, radii, hint, exact, flat, logs):
+    """Add one pair of edges to the sums; returns its first radius, the next pair's `hint`.
 
     `exact[k]` collects n.n J at radius k, `flat[k]` and `logs[k]` collect n.n l l and
     the integral of n.n ln|x - y| from radius k on.
@@ -219,22 +276,28 @@ def add_pair(ax0, ay0, ax1, ay1, bx0, by0, bx1, by1, factor, radii, exact, flat,
     else:
         near = np.sqrt(smallest) - 0.125 * (la + lb)
     far = np.sqrt(largest)
-    k = np.searchsorted(radii, near)
+    k = hint
+    while k > 0 and radii[k - 1] >= near:
+        k -= 1
+    while k < radii.size and radii[k] < near:
+        k += 1
+    begin = k
     if k == radii.size:
-        return
+        return begin
     sine = ux * vy - uy * vx
     parallel = abs(sine) < PARALLEL * la * lb
     slanted = factor * dot
+    apart = corner > FAR * FAR * max(la, lb) * max(la, lb)
     while k < radii.size and radii[k] < far:
         if parallel:
             exact[k] += normal * parallel_pair(ax0, ay0, ax1, ay1, bx0, by0, bx1, by1, radii[k])
         else:
-            exact[k] += slanted * slanted_pair(ax0, ay0, ax1, ay1, bx0, by0, bx1, by1, sine, radii[k])
+            exact[k] += slanted * slanted_pair(ax0, ay0, ax1, ay1, bx0, by0, bx1, by1, sine, radii[k], apart)
         k += 1
     if k == radii.size:
-        return
+        return begin
     flat[k] += factor * dot
-    if corner > FAR * FAR * max(la, lb) * max(la, lb):
+    if apart:
         # two nodes on either edge: the logarithm of a product of four distances
         px, py = 0.5 * (ax0 + ax1 - bx0 - bx1), 0.5 * (ay0 + ay1 - by0 - by1)
         ux, uy, vx, vy = NODE * ux, NODE * uy, NODE * vx, NODE * vy
@@ -250,7 +313,8 @@ def add_pair(ax0, ay0, ax1, ay1, bx0, by0, bx1, by1, factor, radii, exact, flat,
         whole = parallel_pair(ax0, ay0, ax1, ay1, bx0, by0, bx1, by1, 2.0 * far)
         logs[k] += normal * (la * lb * np.log(2.0 * far) - whole)
     else:
-        logs[k] += slanted * slanted_pair(ax0, ay0, ax1, ay1, bx0, by0, bx1, by1, sine, 0.0)
+        logs[k] += slanted * slanted_pair(ax0, ay0, ax1, ay1, bx0, by0, bx1, by1, sine, 0.0, apart)
+    return begin
 
 
 @njit(nogil=True, cache=True)
@@ -261,6 +325,7 @@ def add_run_pairs(tree, leaves, low, high, radii, out):
     """
     exact, flat, logs = out[0], out[1], out[2]
     reach = radii[-1]
+    hint = 0
     stack = np.empty(256, np.int64)
     for m in range(low, high):
         a = leaves[m]
@@ -282,8 +347,8 @@ def add_run_pairs(tree, leaves, low, high, radii, out):
             for p in range(tree.low[a], tree.high[a]):
                 start = p if a == b else tree.low[b]
                 for q in range(start, tree.high[b]):
-                    add_pair(
+                    hint = add_pair(
                         tree.x0[p], tree.y0[p], tree.x1[p], tree.y1[p],
                         tree.x0[q], tree.y0[q], tree.x1[q], tree.y1[q],
-                        1.0 if p == q else 2.0, radii, exact, flat, logs,
+                        1.0 if p == q else 2.0, radii, hint, exact, flat, logs,
                     )  # fmt: skip
