@@ -59,7 +59,7 @@ def test_terrain_alone_is_structure_for_one_test_and_none_for_the_other():
 
 def test_clusters_are_seen_beyond_the_terrain():
     survey = terrain_and_clusters()
-    intensity = fit_intensity(survey, coordinate_covariates(AREA))
+    intensity = fit_intensity(survey, coordinate_covariates(AREA), cell=10.0)
     # to the east by -2 a kilometre
     low, high = intensity.intervals()["easting_km"]
     assert low < -2.0 < high
@@ -78,7 +78,7 @@ def test_clusters_are_seen_beyond_the_terrain():
 
 def test_the_errors_of_the_fit_are_in_the_envelope():
     survey = terrain_only()
-    intensity = fit_intensity(survey, coordinate_covariates(AREA, 2), clustered=False)
+    intensity = fit_intensity(survey, coordinate_covariates(AREA, 2), clustered=False, cell=20.0)
     upper = [
         inhomogeneous_envelopes(
             survey, intensity, RADII, functions=("L",), simulations=39, refit=refit, rng=3
