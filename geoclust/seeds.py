@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
-STEPS = ("curves", "fit", "centres", "patterns", "terrain")
+STEPS = ("curves", "fit", "centres", "patterns", "terrain", "description")
 """Steps that draw random numbers; the order is part of what a seed means."""
 
 

@@ -1,4 +1,4 @@
-"""`geoclust describe`: the curves K, L and g with envelopes of complete randomness."""
+"""`geoclust describe`: the curves K, L, g, G, F and J with envelopes, and tests of complete randomness."""
 
 from __future__ import annotations
 
@@ -12,13 +12,16 @@ from geoclust.cli.output import put
 from geoclust.cli.seeds import chosen_seed
 from geoclust.cli.talk import Talk
 
+# g and G are the same file name to some systems
+FIGURES = {"G": "G_nearest_neighbour", "F": "F_empty_space"}
 
-@click.command(short_help="Curves K, L and g with envelopes of complete randomness.")
+
+@click.command(short_help="Curves with envelopes, and tests of complete randomness.")
 @survey_arguments
 @takes(*READING, "simulations", "r_max", "bandwidth")
 @out_option("Write the curves as CSV to this file.")
 @click.option("--figures", type=click.Path(path_type=Path), metavar="DIR", show_default="none",
-              help="Draw L and g into this folder, as L.svg and g.svg.")  # fmt: skip
+              help="Draw L, g, G, F and J into this folder, one SVG file each.")  # fmt: skip
 @takes("seed", "overwrite", *RUNNING)
 def describe(
     points: Path,
@@ -34,13 +37,18 @@ def describe(
     quiet: bool,
     **reading: Any,
 ) -> None:
-    """Describe a survey by the curves K, L and g, with global envelopes of complete randomness for L and g.
+    """Describe a survey by its curves, with global envelopes, and test complete randomness.
 
-    Prints CSV: function, r_m, estimate, theory, lower, upper; distances and L in metres, K in square
-    metres, g without unit.
+    K, L and g count pairs; G is the distance to the nearest neighbour, F that from any place to the nearest
+    point, J compares both (below 1: clusters), up to one and a half mean spacings. Prints CSV: function,
+    r_m, estimate, theory, lower, upper; distances and L in metres, K in square metres, the others without
+    unit. The tests are told at the end.
     """
     from geoclust import workflow
     from geoclust.curves.envelopes import randomness_envelopes
+    from geoclust.curves.nearest import nearest_radii
+    from geoclust.curves.quadrats import quadrat_test
+    from geoclust.curves.randomness import clark_evans_test
     from geoclust.curves.second_order import default_radii
     from geoclust.report.canvas import save_figures
     from geoclust.report.figures import curve_figure
@@ -56,11 +64,22 @@ def describe(
             survey, radii, simulations=simulations, bandwidth=bandwidth,
             rng=stream(used, "curves"), workers=workers, progress=talk.progress,
         )  # fmt: skip
+        nearest_seed, spacing_seed, quadrat_seed = stream(used, "description").spawn(3)
+        running: dict[str, Any] = {"workers": workers, "progress": talk.progress}
+        tests |= randomness_envelopes(
+            survey, nearest_radii(survey.intensity), simulations=simulations, functions=("G", "F", "J"),
+            rng=nearest_seed, **running,
+        )  # fmt: skip
+        singles = [clark_evans_test(survey, simulations=simulations, rng=spacing_seed, **running)]
+        if survey.n >= 8:
+            singles.append(quadrat_test(survey, simulations=simulations, rng=quadrat_seed))
         table = workflow.curve_table(tests, None, survey).to_csv(index=False)
         if figures is not None:
-            drawn = {f"{name}.svg": curve_figure(test) for name, test in tests.items()}
+            drawn = {f"{FIGURES.get(name, name)}.svg": curve_figure(test) for name, test in tests.items()}
             save_figures(drawn, figures, overwrite)
         put(table, out, overwrite)
         for name, test in tests.items():
             talk.say(f"complete randomness by {name}: p = {test.p_value:.3g}")
+        for single in singles:
+            talk.say(f"{single.method}: {single.statistic:.4g}, p = {single.p_value:.3g}")
         talk.say(f"seed {used}")

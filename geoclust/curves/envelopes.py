@@ -158,14 +158,15 @@ def randomness_envelopes(
     level: float = 0.95,
     alternative: str = "different",
     edge_weight: str = "isotropic",
+    functions: tuple[str, ...] = ("L", "g"),
     rng: np.random.Generator | int,
     workers: int | None = None,
     progress: Progress | None = None,
 ) -> dict[str, EnvelopeTest]:
-    """Test complete randomness with L and g, simulating in the real study area.
+    """Test complete randomness with L and g, or other curves, simulating in the real study area.
 
     The simulated patterns have the number of points of the survey, drawn
-    uniformly in its study area; both curves come from the same patterns.
+    uniformly in its study area; all curves come from the same patterns.
 
     Parameters
     ----------
@@ -181,6 +182,8 @@ def randomness_envelopes(
         As for `global_envelope`.
     edge_weight
         As for `k_function`.
+    functions
+        Names among ``K``, ``L``, ``g``, ``G``, ``F``, ``J``; the last three are Kaplan-Meier estimates.
     rng
         Generator or seed; the answer does not depend on `workers`.
     workers
@@ -191,11 +194,11 @@ def randomness_envelopes(
     Returns
     -------
     dict
-        `EnvelopeTest` under the keys ``L`` and ``g``.
+        `EnvelopeTest` under the name of each function.
     """
     if simulations < 1:
         raise not_allowed("simulations", "a positive whole number", simulations)
-    summaries = Summaries.of_survey(survey, ("L", "g"), radii, bandwidth=bandwidth, edge_weight=edge_weight)
+    summaries = Summaries.of_survey(survey, functions, radii, bandwidth=bandwidth, edge_weight=edge_weight)
     observed = summaries.curves(Drawn(survey.local_xy), workers)
     found = simulated_curves(
         summaries, uniform_draw(survey.area, survey.n), np.random.default_rng(rng).spawn(simulations),

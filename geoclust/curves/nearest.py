@@ -190,6 +190,11 @@ class NearestDistances:
         return -np.expm1(-self.intensity * np.pi * self.radii**2)
 
 
+def nearest_radii(intensity: float, count: int = 100) -> Floats:
+    """Distances up to one and a half mean spacings: under randomness 99.9 % of neighbours are nearer."""
+    return np.linspace(0.0, 1.5 / np.sqrt(intensity), count + 1)[1:]
+
+
 def beyond(radii: Floats) -> float:
     """A distance just above the largest radius: neighbours further away need not be told apart."""
     return float(radii[-1] * (1 + 1e-9) + 1e-9)

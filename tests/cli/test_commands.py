@@ -62,12 +62,18 @@ def test_describe_prints_curves(survey_file, tmp_path, capsys):
     captured = capsys.readouterr()
     table = pd.read_csv(io.StringIO(captured.out))
     assert list(table) == ["function", "r_m", "estimate", "theory", "lower", "upper"]
-    assert set(table["function"]) == {"K", "L", "g"}
-    assert table["r_m"].max() == pytest.approx(50)
+    assert set(table["function"]) == {"K", "L", "g", "G", "F", "J"}
+    pairs = table[table["function"].isin(["K", "L", "g"])]
+    assert pairs["r_m"].max() == pytest.approx(50)
+    j = table[(table["function"] == "J") & table["estimate"].notna()]
+    assert j["estimate"].iloc[-1] < 0.5
     k = table[table["function"] == "K"]
     assert k["theory"].to_numpy() == pytest.approx(np.pi * k["r_m"].to_numpy() ** 2)
     assert "complete randomness by L: p = 0.025" in captured.err
-    assert sorted(p.name for p in figures.iterdir()) == ["L.svg", "g.svg"]
+    assert "Clark & Evans (1954): 0." in captured.err
+    assert "quadrat dispersion: " in captured.err
+    names = ["F_empty_space.svg", "G_nearest_neighbour.svg", "J.svg", "L.svg", "g.svg"]
+    assert sorted(p.name for p in figures.iterdir()) == names
     out = tmp_path / "curves.csv"
     assert run([*arguments, "--out", str(out), "--quiet"]) == 0
     again = capsys.readouterr()

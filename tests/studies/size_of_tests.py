@@ -101,8 +101,8 @@ def main() -> None:
         f"{machine()}",
         "",
         f"{POINTS} points in the sample reserve; {SIMULATIONS} simulated patterns a test (Clark & Evans: "
-        f"{SIMULATIONS_OF_TAILS}, quadrats: 199 sets of counts); level 5 %. Power against a Thomas process of "
-        f"{TRUTH.parent_intensity * 1e4:g} centres per hectare, sigma {TRUTH.sigma:g} m, "
+        f"{SIMULATIONS_OF_TAILS}, quadrats: 199 sets of counts); level 5 %. Power against a Thomas "
+        f"process of {TRUTH.parent_intensity * 1e4:g} centres per hectare, sigma {TRUTH.sigma:g} m, "
         f"{TRUTH.mean_offspring:g} points a cluster, thinned at random.",
         "",
         "| test | rejects complete randomness | rejects the Thomas process |",
