@@ -37,6 +37,10 @@ REASONS: dict[str, str] = {
         "Very different values of the {names} fit almost equally well: the 95 % interval reaches from "
         "{low:.3g} to {high:.3g} {unit}."
     ),
+    "not-converged": (
+        "The chains of the sampler still disagree after all rounds (R-hat {r_hat:.3g}, effective sample size "
+        "{size:.0f}), so their draws are no answer; another seed or more chains may help."
+    ),
 }
 
 

@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+import json
+from functools import partial
+from importlib import resources
 from pathlib import Path
 
 import numpy as np
@@ -15,7 +18,7 @@ from geoclust.area.survey import Survey
 from geoclust.curves.envelopes import global_envelope
 from geoclust.curves.second_order import SecondOrder, l_function
 from geoclust.errors import CannotTell, UsageError
-from geoclust.fitting import status
+from geoclust.fitting import posterior, status
 from geoclust.fitting.fit import fit_clusters
 from geoclust.fitting.moments import ContrastChoices, fit_points
 from geoclust.models.patterns import draw_pattern
@@ -76,6 +79,31 @@ def test_every_reason_why_the_data_cannot_tell(expected, points, bootstrap, said
     assert fit.reason.endswith(".")
     assert "{" not in fit.reason
     assert not fit.ok
+
+
+def test_every_reason_is_a_sentence_that_can_be_filled_in():
+    """The reasons of the record's schema are those that there are sentences for."""
+    schema = json.loads((resources.files("geoclust.report") / "fit.schema.json").read_text("utf-8"))
+    assert set(status.REASONS) == set(schema["properties"]["status"]["enum"]) - {"ok"}
+    figures = {
+        "n": 3, "fewest": 20, "p_value": 0.3, "r_max": 40.0, "names": "sigma", "bounds": "1 to 2 m",
+        "scale": 30.0, "clusters": 4.2, "low": 1.0, "high": 99.0, "unit": "m", "r_hat": 1.3, "size": 12.0,
+    }  # fmt: skip
+    for name in status.REASONS:
+        said = status.sentence(name, **figures)
+        assert said.endswith(".")
+        assert "{" not in said
+    assert status.sentence("ok") == ""
+
+
+def test_chains_that_disagree_are_no_answer(monkeypatch):
+    """One short round on a survey that needs many: a named status, not a map."""
+    monkeypatch.setattr(posterior, "sample_posterior", partial(posterior.sample_posterior, most_rounds=1))
+    monkeypatch.setattr(posterior, "HOPELESS_SIZE", 1e9)
+    pattern = draw_pattern(Thomas(2e-4, 8.0, 6.0), PLOT, np.random.default_rng(6))
+    fit = fit_clusters(Survey(pattern.points + PLOT.origin, PLOT), rng=1)
+    assert fit.status == "not-converged"
+    assert "disagree" in fit.reason
 
 
 def test_too_few_points_for_any_fit():
