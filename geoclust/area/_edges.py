@@ -204,9 +204,7 @@ def distance_to_edges(grid, px, py, limit):
                 if 0 <= ii < grid.columns:
                     c = jj * grid.columns + ii
                     for k in range(grid.first[c], grid.first[c + 1]):
-                        d2 = squared_distance_to_piece(
-                            px, py, grid.x0[k], grid.y0[k], grid.x1[k], grid.y1[k]
-                        )
+                        d2 = squared_distance_to_piece(px, py, grid.x0[k], grid.y0[k], grid.x1[k], grid.y1[k])
                         if d2 < best:
                             best = d2
                 elif step == 1 and ii < 0:

@@ -1,4 +1,4 @@
-"""The slow twin of the posterior sampler: births, deaths, single moves, then memberships and full conditionals.
+"""The slow twin of the posterior sampler: births, deaths, single moves, memberships, full conditionals.
 
 This is the sampler of the textbooks (Møller & Waagepetersen 2004, section 10.2): centres move given the
 parameters, then, given drawn memberships, rho and mu have Gamma full conditionals and sigma takes one

@@ -2,8 +2,9 @@
 
     python tests/benchmarks/posterior.py [design ...]
 
-Both run in this process, one chain at a time on one core; times are processor times of the process. Designs are
-Thomas processes in a square of 100 ha, (rho per ha, mu, sigma m) = (0.5, 10, 12), (1, 5, 20), (2, 4, 20), (1, 5, 40).
+Both run in this process, one chain at a time on one core; times are processor times of the process.
+Designs are Thomas processes in a square of 100 ha, (rho per ha, mu, sigma m) = (0.5, 10, 12),
+(1, 5, 20), (2, 4, 20), (1, 5, 40).
 """
 
 from __future__ import annotations

@@ -30,11 +30,11 @@ from shapely.affinity import translate
 HERE = Path(__file__).parent
 sys.path.insert(0, str(HERE.parent))
 
-import known_areas  # noqa: E402
+import known_areas
 
-from geoclust.area.study_area import StudyArea  # noqa: E402
-from geoclust.area.survey import Survey  # noqa: E402
-from geoclust.curves.second_order import SecondOrder  # noqa: E402
+from geoclust.area.study_area import StudyArea
+from geoclust.area.survey import Survey
+from geoclust.curves.second_order import SecondOrder
 
 # what the table holds: task, measured, limit, remark
 Row = tuple[str, float, str, float, str]

@@ -29,11 +29,11 @@ from scipy.stats import norm
 HERE = Path(__file__).parent
 sys.path.insert(0, str(HERE.parent))
 
-import known_areas  # noqa: E402
+import known_areas
 
-from geoclust.area.study_area import StudyArea  # noqa: E402
-from geoclust.curves.pair_sums import EDGE_WEIGHTS  # noqa: E402
-from geoclust.curves.second_order import SecondOrder, default_radii  # noqa: E402
+from geoclust.area.study_area import StudyArea
+from geoclust.curves.pair_sums import EDGE_WEIGHTS
+from geoclust.curves.second_order import SecondOrder, default_radii
 
 POINTS = 200
 RADII = 12
