@@ -34,7 +34,8 @@ import known_areas
 
 from geoclust.area.study_area import StudyArea
 from geoclust.area.survey import Survey
-from geoclust.curves.second_order import SecondOrder
+from geoclust.curves.envelopes import randomness_envelopes
+from geoclust.curves.second_order import SecondOrder, default_radii
 
 # what the table holds: task, measured, limit, remark
 Row = tuple[str, float, str, float, str]
@@ -208,6 +209,31 @@ def covariances() -> list[Row]:
     return rows
 
 
+def envelopes() -> list[Row]:
+    """Cost of one simulated pattern of an envelope of g, simulation and weights included."""
+    rows: list[Row] = []
+    survey, near = reference(2_500)
+    far = default_radii(survey.area)
+    tree = cKDTree(survey.xy)
+    for radii, words in ((near, "38 neighbours"), (far, "a quarter of the side, the default")):
+        theirs = best(lambda r=radii: tree.count_neighbors(tree, r), 3)
+        for weight in ("isotropic", "rigid-motion"):
+            ours = best(
+                lambda r=radii, w=weight: randomness_envelopes(
+                    survey, r, functions=("g",), simulations=99, edge_weight=w, rng=1
+                ),
+                2,
+            )
+            # isotropic weights at long range are costly, and what rigid-motion weights are for
+            limited = weight == "rigid-motion" or radii is near
+            rows.append(
+                (f"envelope of g, 2,500 points to {words}, {weight}: a pattern over count_neighbors",
+                 ours / 99 / theirs, "<" if limited else "", 0.5,
+                 f"{ours / 99 * 1e3:.1f} ms, {theirs * 1e3:.1f} ms; all threads")
+            )  # fmt: skip
+    return rows
+
+
 def report(rows: list[Row]) -> str:
     lines = [
         "# Results of the benchmarks",
@@ -243,7 +269,7 @@ def main() -> int:
     if given.peak:
         print_peak(given.peak)
         return 0
-    rows = [*pairs(), *circles(), *covariances()]
+    rows = [*pairs(), *circles(), *covariances(), *envelopes()]
     text = report(rows)
     print(text)
     if given.write:
