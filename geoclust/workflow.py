@@ -15,6 +15,7 @@ import pandas as pd
 from geoclust.area.study_area import StudyArea
 from geoclust.area.survey import Survey
 from geoclust.centres.locate import locate_centres
+from geoclust.centres.rasters import cell_areas
 from geoclust.centres.result import CentreMap
 from geoclust.curves.curve import Curve
 from geoclust.curves.envelopes import EnvelopeTest, randomness_envelopes
@@ -293,12 +294,10 @@ def read_extras(
         warnings.extend(found.attrs.get("warnings", []))
         return found
 
-    return Extras(
-        polygons(zones, zones_layer),
-        polygons(unsurveyed, unsurveyed_layer),
-        None if like is None else grid_like(str(like)),
-        warnings,
-    )
+    grid = None if like is None else grid_like(str(like))
+    if grid is not None and not cell_areas(grid, survey.area).any():
+        raise UsageError(f"The template raster {like} does not overlap the study area; give one that does.")
+    return Extras(polygons(zones, zones_layer), polygons(unsurveyed, unsurveyed_layer), grid, warnings)
 
 
 def _analyse_survey(
@@ -318,6 +317,7 @@ def _analyse_survey(
     fit: ClusterFit | None = None
     centres: CentreMap | None = None
     status, reason = "ok", ""
+    notes = list(extras.warnings)
     choices: dict[str, object] = {"edge_weight": "isotropic", "model": model, "simulations": simulations}
     if survey.n >= 2:
         radii = default_radii(survey.area)
@@ -338,6 +338,18 @@ def _analyse_survey(
             survey, model, intensity=None if terrain is None else terrain.intensity, rng=fit_seed,
             workers=workers, progress=progress,
         )  # fmt: skip
+        if fit.status == "not-converged":
+            # a usable answer, and the failure said: parameters by the moments, centres at these
+            notes.append(
+                f"{fit.reason} Its place is taken by a minimum contrast fit, and the centres are sampled "
+                "with its parameters taken as known."
+            )
+            choices["posterior_not_converged"] = fit.choices.get("diagnostics", fit.reason)
+            fit = fit_clusters(
+                survey, model, method="minimum-contrast",
+                intensity=None if terrain is None else terrain.intensity, rng=fit_seed.spawn(1)[0],
+                workers=workers, progress=progress,
+            )  # fmt: skip
         status, reason = fit.status, fit.reason
         if fit.ok:
             centres = locate_centres(
@@ -346,9 +358,7 @@ def _analyse_survey(
             )  # fmt: skip
     except CannotTell as verdict:
         status, reason = verdict.status, str(verdict)
-    return Analysis(
-        status, reason, survey, envelopes, fit, centres, choices, seed, out, list(extras.warnings), terrain
-    )
+    return Analysis(status, reason, survey, envelopes, fit, centres, choices, seed, out, notes, terrain)
 
 
 def curve_table(
@@ -431,6 +441,7 @@ def _write_all(
         command=command,
         title=title,
         files=files,
+        notes=found.notes,
     )
 
 

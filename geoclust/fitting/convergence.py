@@ -19,6 +19,9 @@ ENOUGH = 400.0
 # draws kept per chain; longer runs are thinned to this, so memory stays bounded
 KEPT = 500
 FIRST = 250
+# kernels evaluated in all before patience ends: a few minutes on two cores. Counted, not timed, so
+# that the same seed gives the same answer on any machine
+PATIENCE = 2e10
 
 
 @dataclass(frozen=True, eq=False)
@@ -90,7 +93,8 @@ def sample_until_converged(
     every
         Moves of centres between two walks of scale and background.
     most_rounds
-        Each round after the first is as long as all before it together.
+        Each round after the first is as long as all before it together; fewer are made where
+        every move meets very many points.
     enough
         Effective sample size to reach for every quantity.
     """
@@ -103,10 +107,13 @@ def sample_until_converged(
     )  # fmt: skip
     moves = FIRST * moves_per_draw
     sample = _look(setup, running, seeds[1], moves, enough)
+    in_reach = np.pi * (setup.reach * setup.start.scale) ** 2 * setup.n / setup.area.area
+    a_move = 1.0 + min(in_reach, setup.n)
     for k in range(1, most_rounds):
-        if sample.converged:
-            break
         more = len(running[0].records)
+        after = chains * (moves + more * moves_per_draw) * a_move
+        if sample.converged or (k > 1 and after > PATIENCE):
+            break
         extend(
             running, draws=more, moves_per_draw=moves_per_draw, every=every, workers=workers,
             progress=_labelled(progress, k + 1),

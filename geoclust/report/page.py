@@ -67,6 +67,7 @@ def write_page(
     title: str,
     files: Sequence[tuple[str, str]],
     terrain: tuple[LogLinearIntensity, Mapping[str, EnvelopeTest]] | None = None,
+    notes: Sequence[str] = (),
 ) -> None:
     """Write the page.
 
@@ -90,6 +91,8 @@ def write_page(
         Name and meaning of each file in the folder.
     terrain
         Intensity on covariates, and the tests beyond it.
+    notes
+        Sentences that a reader must know before using the results.
 
     Raises
     ------
@@ -122,6 +125,7 @@ def write_page(
         steps=taken,
         references=method.references(taken),
         audit=_audit_groups(audit),
+        notes=notes,
         warnings=audit.warnings if audit is not None else [],
         files=files,
         contents=tables.contents(files, unused),
