@@ -26,8 +26,8 @@ from geoclust.workers import in_order
 
 __all__ = ["Floats", "StudyArea", "checked_points", "portions"]
 
-# circles per portion of threaded work: large enough to hide the cost of a task
-PORTION = 5_000
+# circles per portion of threaded work: the largest circles of it take no more than a second
+PORTION = 1_000
 
 
 class StudyArea:
