@@ -15,12 +15,12 @@ from geoclust.curves.envelopes import global_envelope
 from geoclust.curves.second_order import SecondOrder, default_bandwidth
 from geoclust.errors import CannotTell, not_allowed
 from geoclust.fitting import status as verdicts
+from geoclust.fitting.bootstrap import bootstrap_draws, percentile_intervals
 from geoclust.fitting.contrast import EXPONENTS, Contrast, ContrastFit, checked_function, fit_contrast
 from geoclust.fitting.result import ClusterFit
 from geoclust.intensity.base import Intensity
 from geoclust.intensity.envelopes import inhomogeneous_envelopes
 from geoclust.models.base import ClusterModel
-from geoclust.models.patterns import draw_pattern
 from geoclust.workers import in_order
 
 Floats = npt.NDArray[np.float64]
@@ -156,15 +156,19 @@ def fit_by_contrast(
         raise CannotTell("too-few-points", reason)
     found = fit_points(kind, survey.local_xy, survey.area, choices, workers, factors_of(intensity))
     p_value = clustering_p_value(survey, found.r_max, test_seed, workers, progress, intensity)
-    draws = _bootstrap(
-        kind, found.fit.model, survey.area, choices, bootstrap, boot_seed, workers, progress, intensity
-    )
-    intervals = {
-        name: (float(np.quantile(v, 0.025)), float(np.quantile(v, 0.975)))
-        for name, v in draws.items()
-        if len(v) >= 39
-    }
-    status, reason = _verdict(survey, found, p_value, intervals)
+
+    def fit_again(points: Floats, again: Intensity | None) -> ClusterModel:
+        return fit_points(kind, points, survey.area, choices, factors=factors_of(again)).fit.model
+
+    draws = bootstrap_draws(
+        found.fit.model, survey.area, fit_again, bootstrap, boot_seed, workers=workers, progress=progress,
+        intensity=intensity,
+    )  # fmt: skip
+    intervals = percentile_intervals(draws)
+    status, reason = verdicts.moment_verdict(
+        found.fit.model, survey.area.area, r_max=found.r_max, on_bound=found.fit.on_bound,
+        bounds=found.fit.bounds, p_value=p_value, intervals=intervals,
+    )  # fmt: skip
     contrast = found.contrast
     curve, fitted = fitted_curve(found)
     return ClusterFit(
@@ -241,57 +245,3 @@ def clustering_p_value(
         if progress is not None:
             progress("test for clustering", k + 1, count)
     return global_envelope(observed, curves, alternative="clustered").p_value
-
-
-def _bootstrap(
-    kind: type[ClusterModel],
-    model: ClusterModel,
-    area: StudyArea,
-    choices: ContrastChoices,
-    count: int,
-    rng: np.random.Generator,
-    workers: int | None,
-    progress: Progress | None,
-    intensity: Intensity | None = None,
-) -> dict[str, Floats]:
-    def one(seed: np.random.Generator) -> dict[str, float] | None:
-        points = draw_pattern(model, area, seed, intensity).points
-        if len(points) < 2:
-            return None
-        again = None if intensity is None else factors_of(intensity.refit(points, seed))
-        return fit_points(kind, points, area, choices, factors=again).fit.model.parameters
-
-    kept: list[dict[str, float]] = []
-    for k, parameters in enumerate(in_order(one, rng.spawn(count), workers)):
-        if parameters is not None:
-            kept.append(parameters)
-        if progress is not None:
-            progress("bootstrap", k + 1, count)
-    return {p.name: np.array([v[p.name] for v in kept]) for p in kind.described} if kept else {}
-
-
-def _verdict(
-    survey: Survey, found: MomentFit, p_value: float, intervals: dict[str, tuple[float, float]]
-) -> tuple[str, str]:
-    """Status and sentence, the gravest reason first."""
-    model = found.fit.model
-    if p_value > verdicts.TEST_LEVEL:
-        return _named("no-clustering", p_value=p_value, r_max=found.r_max)
-    scale = model.scale
-    if scale > 0.5 * found.r_max:
-        return _named("sigma-beyond-range", scale=scale, r_max=found.r_max)
-    if found.fit.on_bound:
-        name = found.fit.on_bound[0]
-        described = next(p for p in model.described if p.name == name)
-        factor, unit = (1e4, "ha⁻¹") if described.per_area else (1.0, described.unit)
-        low, high = found.fit.bounds[name]
-        return _named("on-bound", names=name.replace("_", " "),
-                      bounds=f"{low * factor:.3g} to {high * factor:.3g} {unit}")  # fmt: skip
-    clusters = model.parent_intensity * survey.area.area
-    if clusters < verdicts.FEWEST_CLUSTERS:
-        return _named("few-clusters", clusters=clusters, fewest=verdicts.FEWEST_CLUSTERS)
-    return verdicts.flat_valley(model, intervals)
-
-
-def _named(status: str, **figures: object) -> tuple[str, str]:
-    return status, verdicts.sentence(status, **figures)

@@ -44,6 +44,55 @@ REASONS: dict[str, str] = {
 }
 
 
+def moment_verdict(
+    model: ClusterModel,
+    area: float,
+    *,
+    r_max: float,
+    on_bound: tuple[str, ...],
+    bounds: dict[str, tuple[float, float]],
+    p_value: float,
+    intervals: dict[str, tuple[float, float]],
+) -> tuple[str, str]:
+    """Status and sentence of a fit by moments, the gravest reason first.
+
+    Parameters
+    ----------
+    model
+        The fitted model.
+    area
+        Of the study area, m².
+    r_max
+        Largest distance used, metres.
+    on_bound, bounds
+        Names of the parameters that ended on a limit of the search, and the limits of each.
+    p_value
+        Of the one-sided test for clustering.
+    intervals
+        95 % interval of each parameter; may be empty.
+    """
+    if p_value > TEST_LEVEL:
+        return named("no-clustering", p_value=p_value, r_max=r_max)
+    if model.scale > 0.5 * r_max:
+        return named("sigma-beyond-range", scale=model.scale, r_max=r_max)
+    if on_bound:
+        name = on_bound[0]
+        described = next(p for p in model.described if p.name == name)
+        factor, unit = (1e4, "ha⁻¹") if described.per_area else (1.0, described.unit)
+        low, high = bounds[name]
+        return named("on-bound", names=name.replace("_", " "),
+                     bounds=f"{low * factor:.3g} to {high * factor:.3g} {unit}")  # fmt: skip
+    clusters = model.parent_intensity * area
+    if clusters < FEWEST_CLUSTERS:
+        return named("few-clusters", clusters=clusters, fewest=FEWEST_CLUSTERS)
+    return flat_valley(model, intervals)
+
+
+def named(status: str, **figures: object) -> tuple[str, str]:
+    """A status with its sentence."""
+    return status, sentence(status, **figures)
+
+
 def flat_valley(model: ClusterModel, intervals: dict[str, tuple[float, float]]) -> tuple[str, str]:
     """Status and sentence if an interval is too wide to be an answer; otherwise ``ok``."""
     for p in model.described:
