@@ -35,7 +35,11 @@ class Pattern:
 
 
 def draw_pattern(
-    model: ClusterModel, area: StudyArea, rng: np.random.Generator, intensity: Intensity | None = None
+    model: ClusterModel,
+    area: StudyArea,
+    rng: np.random.Generator,
+    intensity: Intensity | None = None,
+    wide: StudyArea | None = None,
 ) -> Pattern:
     """Draw one pattern, offspring of centres outside the study area included.
 
@@ -46,13 +50,12 @@ def draw_pattern(
     Centres are drawn in the study area widened so far that fewer than 1e-9
     points are expected to be missed: the expected number of points with a
     centre further out is at most intensity times area times the share of
-    offspring beyond that distance.
+    offspring beyond that distance. Where many models are drawn from a few times each,
+    `wide` may be the `simple_surroundings` of the study area, which are quicker to make.
     """
-    # as many more offspring as thinning to the mean takes away
-    surplus = 1.0 if intensity is None else intensity.highest / intensity.mean
-    expected = model.intensity * surplus * area.area
-    distance = model.reach(min(MISSED / max(expected, MISSED), 0.5))
-    wide = area.dilated(distance)
+    surplus = _surplus(intensity)
+    if wide is None:
+        wide = area.dilated(_furthest(model, area, intensity))
     number = int(rng.poisson(model.parent_intensity * wide.area))
     centres = wide.local_uniform_points(number, rng) + (wide.origin - area.origin)
     sizes = rng.poisson(model.mean_offspring * surplus, number)
@@ -64,6 +67,24 @@ def draw_pattern(
         chance = intensity.at(points[inside] + area.origin) / intensity.highest
         kept[inside] = rng.random(len(inside)) < chance
     return Pattern(np.ascontiguousarray(points[kept]), centres, cluster[kept])
+
+
+def simple_surroundings(
+    model: ClusterModel, area: StudyArea, intensity: Intensity | None = None
+) -> StudyArea:
+    """A convex area that holds the study area widened as far as `draw_pattern` needs it."""
+    return StudyArea(area.polygon.convex_hull.buffer(1.02 * _furthest(model, area, intensity), quad_segs=8))
+
+
+def _furthest(model: ClusterModel, area: StudyArea, intensity: Intensity | None) -> float:
+    """Distance from the study area beyond which centres may be left out, metres."""
+    expected = model.intensity * _surplus(intensity) * area.area
+    return model.reach(min(MISSED / max(expected, MISSED), 0.5))
+
+
+def _surplus(intensity: Intensity | None) -> float:
+    """As many more offspring as thinning to the mean takes away."""
+    return 1.0 if intensity is None else intensity.highest / intensity.mean
 
 
 def draw_random_points(intensity: float, area: StudyArea, rng: np.random.Generator) -> Floats:
