@@ -9,7 +9,7 @@ import numpy.typing as npt
 import shapely
 from affine import Affine
 
-from geoclust.area import _cells, _circles, _covariance, _edges, _gaussian
+from geoclust.area import _cauchy, _cells, _circles, _covariance, _edges, _gaussian
 from geoclust.area.checks import Floats, checked_crs, checked_points, checked_polygon, example, spread
 from geoclust.area.covariance import (
     ShiftTable,
@@ -218,6 +218,11 @@ class StudyArea:
     def tree(self) -> _covariance.EdgeTree:
         """The hierarchy of boxes over the edges, for pairs of edges (local coordinates)."""
         return edge_tree(self._starts, self._ends, self._ring_sizes)
+
+    @cached_property
+    def chains(self) -> _cauchy.Chains:
+        """The hierarchy of chains of edges, for sums over the whole boundary (local coordinates)."""
+        return _cauchy.chain_tree(self._starts, self._ends, self._ring_sizes)
 
     def set_covariance(self, shifts: npt.ArrayLike, *, workers: int | None = None) -> Floats:
         """Area that the study area and a shifted copy of it have in common.
@@ -466,10 +471,12 @@ class StudyArea:
         """The study area widened by `distance` metres on all sides (holes may close)."""
         if distance <= 0:
             raise not_allowed("distance", "a positive number of metres", distance)
-        if distance not in self._dilated:
-            wider = StudyArea(self.polygon.buffer(distance, quad_segs=16), self.crs)
-            self._dilated = {distance: wider}
-        return self._dilated[distance]
+        # threads may ask for different distances at the same time
+        known = self._dilated.get(distance)
+        if known is None:
+            known = StudyArea(self.polygon.buffer(distance, quad_segs=16), self.crs)
+            self._dilated = {distance: known}
+        return known
 
 
 def portions(count: int, size: int = PORTION) -> list[slice]:

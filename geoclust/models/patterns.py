@@ -3,9 +3,11 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Protocol, runtime_checkable
 
 import numpy as np
 import numpy.typing as npt
+import shapely
 
 from geoclust.area.study_area import Floats, StudyArea
 from geoclust.intensity.base import Intensity
@@ -13,6 +15,17 @@ from geoclust.models.base import ClusterModel
 
 # expected number of points missed because their centre lies too far outside
 MISSED = 1e-9
+# the widening, as parts of the radius of the disc round the study area, that the cheapest is chosen from
+WIDENINGS = 2.0 ** -np.arange(9)
+
+
+@runtime_checkable
+class HeavyTailed(Protocol):
+    """A model whose offspring density falls so slowly that no widening catches all."""
+
+    @property
+    def cubic_tail(self) -> float:
+        """A, metres, such that the offspring density at distance r is at most A / r³."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -24,7 +37,8 @@ class Pattern:
     points
         (n, 2) inside the study area.
     centres
-        (m, 2) all centres drawn, those outside the boundary included.
+        (m, 2) all centres drawn, those outside the boundary included. With a heavy tail: all in the
+        widened study area, and those further out that have a point.
     cluster
         (n,) row of the centre of each point.
     """
@@ -50,41 +64,97 @@ def draw_pattern(
     Centres are drawn in the study area widened so far that fewer than 1e-9
     points are expected to be missed: the expected number of points with a
     centre further out is at most intensity times area times the share of
-    offspring beyond that distance. Where many models are drawn from a few times each,
-    `wide` may be the `simple_surroundings` of the study area, which are quicker to make.
+    offspring beyond that distance. With a heavy tail nothing is missed:
+    centres further out are drawn given that they have a point in the study
+    area (Brix & Kendall 2002, Advances in Applied Probability 34: 267-280).
     """
-    surplus = _surplus(intensity)
-    if wide is None:
-        wide = area.dilated(_furthest(model, area, intensity))
+    # as many more offspring as thinning to the mean takes away
+    surplus = 1.0 if intensity is None else intensity.highest / intensity.mean
+    mean_offspring = model.mean_offspring * surplus
+    if isinstance(model, HeavyTailed):
+        distance, radius = _widening(area, model.cubic_tail)
+    else:
+        expected = model.intensity * surplus * area.area
+        distance = model.reach(min(MISSED / max(expected, MISSED), 0.5))
+    wide = area.dilated(distance)
     number = int(rng.poisson(model.parent_intensity * wide.area))
     centres = wide.local_uniform_points(number, rng) + (wide.origin - area.origin)
-    sizes = rng.poisson(model.mean_offspring * surplus, number)
+    sizes = rng.poisson(mean_offspring, number)
     cluster = np.repeat(np.arange(number), sizes)
     points = centres[cluster] + model.draw_offsets(len(cluster), rng)
     kept = area.local_contains(points)
-    if intensity is not None:
-        inside = np.flatnonzero(kept)
-        chance = intensity.at(points[inside] + area.origin) / intensity.highest
-        kept[inside] = rng.random(len(inside)) < chance
-    return Pattern(np.ascontiguousarray(points[kept]), centres, cluster[kept])
+    points, cluster = points[kept], cluster[kept]
+
+    def thinned(at: Floats) -> npt.NDArray[np.bool_]:
+        if intensity is None:
+            return np.ones(len(at), bool)
+        return rng.random(len(at)) < intensity.at(at + area.origin) / intensity.highest
+
+    kept = thinned(points)
+    points, cluster = points[kept], cluster[kept]
+    if isinstance(model, HeavyTailed):
+        theirs, whose = _from_far(model, model.cubic_tail, area, wide, distance, radius, mean_offspring, rng)
+        kept = thinned(theirs)
+        others, row = np.unique(whose[kept], axis=0, return_inverse=True)
+        centres, points = np.concatenate([centres, others]), np.concatenate([points, theirs[kept]])
+        cluster = np.concatenate([cluster, number + row.reshape(-1)])
+    return Pattern(np.ascontiguousarray(points), centres, cluster)
 
 
-def simple_surroundings(
-    model: ClusterModel, area: StudyArea, intensity: Intensity | None = None
-) -> StudyArea:
-    """A convex area that holds the study area widened as far as `draw_pattern` needs it."""
-    return StudyArea(area.polygon.convex_hull.buffer(1.02 * _furthest(model, area, intensity), quad_segs=8))
+def _widening(area: StudyArea, tail: float) -> tuple[float, float]:
+    """How far to widen the study area for the least work, and the radius of the disc round it."""
+    radius = float(np.hypot(*area._starts.T).max())
+    boxes = shapely.bounds(area.polygon.geoms)
+    width, height = boxes[:, 2] - boxes[:, 0], boxes[:, 3] - boxes[:, 1]
+    costs = []
+    for d in radius * WIDENINGS:
+        each = width * height + 2.0 * d * (width + height) + np.pi * d * d
+        inner = min(float(each.sum()), np.pi * (radius + d) ** 2)
+        costs.append(inner + area.area * 4.0 * np.pi * radius**2 * tail / d**3)
+    return float(radius * WIDENINGS[int(np.argmin(costs))]), radius
 
 
-def _furthest(model: ClusterModel, area: StudyArea, intensity: Intensity | None) -> float:
-    """Distance from the study area beyond which centres may be left out, metres."""
-    expected = model.intensity * _surplus(intensity) * area.area
-    return model.reach(min(MISSED / max(expected, MISSED), 0.5))
+def _from_far(
+    model: ClusterModel, tail: float, area: StudyArea, wide: StudyArea, distance: float, radius: float,
+    mean_offspring: float, rng: np.random.Generator,
+) -> tuple[Floats, Floats]:  # fmt: skip
+    """Points with a centre outside the widened study area, and the centre of each.
 
+    With k bounded by A / u³, u the least distance of a centre from the study area W, its
+    offspring in W are a thinned Poisson number of mean m = mu |W| A / u³, uniform in W. Centres
+    with any before thinning have the intensity rho (1 - exp(-m)), at most rho m. Within the disc of
+    twice the radius round W, u is bounded by the widening; beyond, rho m has a finite integral
+    whose radial part is the sum of two powers, drawn by inversion.
+    """
+    rho = model.parent_intensity
+    # arcs of the widened boundary are polygons, a little nearer than the full distance
+    near = 0.99 * distance
+    mass = mean_offspring * area.area * tail
+    number = int(rng.poisson(-np.expm1(-mass / near**3) * rho * 4.0 * np.pi * radius**2))
+    turn = rng.uniform(0.0, 2.0 * np.pi, number)
+    from_middle = 2.0 * radius * np.sqrt(rng.random(number))
+    inner = np.column_stack([from_middle * np.cos(turn), from_middle * np.sin(turn)])
+    inner = inner[~wide.local_contains(inner + (area.origin - wide.origin))]
+    # beyond the disc: u^-2 and radius u^-3, two thirds and one third of the integral over u > radius
+    number = int(rng.poisson(2.0 * np.pi * rho * mass * 1.5 / radius))
+    power = np.where(rng.random(number) < 2.0 / 3.0, 1.0, 0.5)
+    u = radius * (1.0 - rng.random(number)) ** -power
+    m = mass / u**3
+    kept = rng.random(number) * m < -np.expm1(-m)
+    u, turn = u[kept], rng.uniform(0.0, 2.0 * np.pi, int(kept.sum()))
+    outer = (u + radius)[:, None] * np.column_stack([np.cos(turn), np.sin(turn)])
 
-def _surplus(intensity: Intensity | None) -> float:
-    """As many more offspring as thinning to the mean takes away."""
-    return 1.0 if intensity is None else intensity.highest / intensity.mean
+    centres = np.concatenate([inner, outer])
+    least = np.concatenate([np.full(len(inner), near), u])
+    m = mass / least**3
+    # at least one: the first of a Poisson process before m, and those after it
+    first = -np.log1p(rng.random(len(m)) * np.expm1(-m))
+    sizes = 1 + rng.poisson(np.maximum(m - first, 0.0))
+    which = np.repeat(np.arange(len(centres)), sizes)
+    points = area.local_uniform_points(len(which), rng)
+    density = model.offspring_density(np.hypot(*(points - centres[which]).T))
+    kept = rng.random(len(which)) * tail / least[which] ** 3 < density
+    return points[kept], centres[which[kept]]
 
 
 def draw_random_points(intensity: float, area: StudyArea, rng: np.random.Generator) -> Floats:
