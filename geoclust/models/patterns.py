@@ -67,16 +67,17 @@ def draw_pattern(
     offspring beyond that distance. With a heavy tail nothing is missed:
     centres further out are drawn given that they have a point in the study
     area (Brix & Kendall 2002, Advances in Applied Probability 34: 267-280).
+
+    Where many models are drawn from a few times each, `wide` may be the `simple_surroundings`
+    of the study area, which are quicker to make; a heavy tail has no use for them.
     """
-    # as many more offspring as thinning to the mean takes away
-    surplus = 1.0 if intensity is None else intensity.highest / intensity.mean
+    surplus = _surplus(intensity)
     mean_offspring = model.mean_offspring * surplus
     if isinstance(model, HeavyTailed):
         distance, radius = _widening(area, model.cubic_tail)
-    else:
-        expected = model.intensity * surplus * area.area
-        distance = model.reach(min(MISSED / max(expected, MISSED), 0.5))
-    wide = area.dilated(distance)
+        wide = area.dilated(distance)
+    elif wide is None:
+        wide = area.dilated(_furthest(model, area, intensity))
     number = int(rng.poisson(model.parent_intensity * wide.area))
     centres = wide.local_uniform_points(number, rng) + (wide.origin - area.origin)
     sizes = rng.poisson(mean_offspring, number)
@@ -99,6 +100,26 @@ def draw_pattern(
         centres, points = np.concatenate([centres, others]), np.concatenate([points, theirs[kept]])
         cluster = np.concatenate([cluster, number + row.reshape(-1)])
     return Pattern(np.ascontiguousarray(points), centres, cluster)
+
+
+def simple_surroundings(
+    model: ClusterModel, area: StudyArea, intensity: Intensity | None = None
+) -> StudyArea | None:
+    """A convex area that holds the study area widened as far as `draw_pattern` needs it, if that is fixed."""
+    if isinstance(model, HeavyTailed):
+        return None
+    return StudyArea(area.polygon.convex_hull.buffer(1.02 * _furthest(model, area, intensity), quad_segs=8))
+
+
+def _furthest(model: ClusterModel, area: StudyArea, intensity: Intensity | None) -> float:
+    """Distance from the study area beyond which centres may be left out, metres."""
+    expected = model.intensity * _surplus(intensity) * area.area
+    return model.reach(min(MISSED / max(expected, MISSED), 0.5))
+
+
+def _surplus(intensity: Intensity | None) -> float:
+    """As many more offspring as thinning to the mean takes away."""
+    return 1.0 if intensity is None else intensity.highest / intensity.mean
 
 
 def _widening(area: StudyArea, tail: float) -> tuple[float, float]:
