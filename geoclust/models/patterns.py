@@ -69,17 +69,14 @@ def draw_pattern(
     area (Brix & Kendall 2002, Advances in Applied Probability 34: 267-280).
 
     Where many models are drawn from a few times each, `wide` may be the `simple_surroundings`
-    of the study area, which are quicker to make; a heavy tail has no use for them.
+    of the study area, which are quicker to make.
     """
-    surplus = _surplus(intensity)
-    mean_offspring = model.mean_offspring * surplus
-    if isinstance(model, HeavyTailed):
-        distance, radius = _widening(area, model.cubic_tail)
+    mean_offspring = model.mean_offspring * _surplus(intensity)
+    distance = _furthest(model, area, intensity)
+    if wide is None:
         wide = area.dilated(distance)
-    elif wide is None:
-        wide = area.dilated(_furthest(model, area, intensity))
-    number = int(rng.poisson(model.parent_intensity * wide.area))
-    centres = wide.local_uniform_points(number, rng) + (wide.origin - area.origin)
+    centres = model.draw_centres(wide, _missed(model) / mean_offspring, rng) + (wide.origin - area.origin)
+    number = len(centres)
     sizes = rng.poisson(mean_offspring, number)
     cluster = np.repeat(np.arange(number), sizes)
     points = centres[cluster] + model.draw_offsets(len(cluster), rng)
@@ -94,7 +91,7 @@ def draw_pattern(
     kept = thinned(points)
     points, cluster = points[kept], cluster[kept]
     if isinstance(model, HeavyTailed):
-        theirs, whose = _from_far(model, model.cubic_tail, area, wide, distance, radius, mean_offspring, rng)
+        theirs, whose = _from_far(model, model.cubic_tail, area, wide, distance, mean_offspring, rng)
         kept = thinned(theirs)
         others, row = np.unique(whose[kept], axis=0, return_inverse=True)
         centres, points = np.concatenate([centres, others]), np.concatenate([points, theirs[kept]])
@@ -104,17 +101,22 @@ def draw_pattern(
 
 def simple_surroundings(
     model: ClusterModel, area: StudyArea, intensity: Intensity | None = None
-) -> StudyArea | None:
-    """A convex area that holds the study area widened as far as `draw_pattern` needs it, if that is fixed."""
-    if isinstance(model, HeavyTailed):
-        return None
+) -> StudyArea:
+    """A convex area that holds the study area widened as far as `draw_pattern` needs it."""
     return StudyArea(area.polygon.convex_hull.buffer(1.02 * _furthest(model, area, intensity), quad_segs=8))
 
 
 def _furthest(model: ClusterModel, area: StudyArea, intensity: Intensity | None) -> float:
-    """Distance from the study area beyond which centres may be left out, metres."""
+    """Distance from the study area beyond which centres may be left out, or are drawn apart; metres."""
+    if isinstance(model, HeavyTailed):
+        return _widening(area, model.cubic_tail)
     expected = model.intensity * _surplus(intensity) * area.area
-    return model.reach(min(MISSED / max(expected, MISSED), 0.5))
+    return model.reach(min(_missed(model) / max(expected, MISSED), 0.5))
+
+
+def _missed(model: ClusterModel) -> float:
+    """Points that may be missed on account of each level."""
+    return MISSED / len(model.levels)
 
 
 def _surplus(intensity: Intensity | None) -> float:
@@ -122,9 +124,14 @@ def _surplus(intensity: Intensity | None) -> float:
     return 1.0 if intensity is None else intensity.highest / intensity.mean
 
 
-def _widening(area: StudyArea, tail: float) -> tuple[float, float]:
-    """How far to widen the study area for the least work, and the radius of the disc round it."""
-    radius = float(np.hypot(*area._starts.T).max())
+def _radius(area: StudyArea) -> float:
+    """Radius of a disc round the local origin that holds the study area."""
+    return float(np.hypot(*area._starts.T).max())
+
+
+def _widening(area: StudyArea, tail: float) -> float:
+    """How far to widen the study area for the least work in drawing a heavy-tailed model, metres."""
+    radius = _radius(area)
     boxes = shapely.bounds(area.polygon.geoms)
     width, height = boxes[:, 2] - boxes[:, 0], boxes[:, 3] - boxes[:, 1]
     costs = []
@@ -132,11 +139,11 @@ def _widening(area: StudyArea, tail: float) -> tuple[float, float]:
         each = width * height + 2.0 * d * (width + height) + np.pi * d * d
         inner = min(float(each.sum()), np.pi * (radius + d) ** 2)
         costs.append(inner + area.area * 4.0 * np.pi * radius**2 * tail / d**3)
-    return float(radius * WIDENINGS[int(np.argmin(costs))]), radius
+    return float(radius * WIDENINGS[int(np.argmin(costs))])
 
 
 def _from_far(
-    model: ClusterModel, tail: float, area: StudyArea, wide: StudyArea, distance: float, radius: float,
+    model: ClusterModel, tail: float, area: StudyArea, wide: StudyArea, distance: float,
     mean_offspring: float, rng: np.random.Generator,
 ) -> tuple[Floats, Floats]:  # fmt: skip
     """Points with a centre outside the widened study area, and the centre of each.
@@ -147,7 +154,7 @@ def _from_far(
     twice the radius round W, u is bounded by the widening; beyond, rho m has a finite integral
     whose radial part is the sum of two powers, drawn by inversion.
     """
-    rho = model.parent_intensity
+    rho, radius = model.parent_intensity, _radius(area)
     # arcs of the widened boundary are polygons, a little nearer than the full distance
     near = 0.99 * distance
     mass = mean_offspring * area.area * tail
@@ -155,7 +162,6 @@ def _from_far(
     turn = rng.uniform(0.0, 2.0 * np.pi, number)
     from_middle = 2.0 * radius * np.sqrt(rng.random(number))
     inner = np.column_stack([from_middle * np.cos(turn), from_middle * np.sin(turn)])
-    inner = inner[~wide.local_contains(inner + (area.origin - wide.origin))]
     # beyond the disc: u^-2 and radius u^-3, two thirds and one third of the integral over u > radius
     number = int(rng.poisson(2.0 * np.pi * rho * mass * 1.5 / radius))
     power = np.where(rng.random(number) < 2.0 / 3.0, 1.0, 0.5)
@@ -167,6 +173,8 @@ def _from_far(
 
     centres = np.concatenate([inner, outer])
     least = np.concatenate([np.full(len(inner), near), u])
+    beyond = ~wide.local_contains(centres + (area.origin - wide.origin))
+    centres, least = centres[beyond], least[beyond]
     m = mass / least**3
     # at least one: the first of a Poisson process before m, and those after it
     first = -np.log1p(rng.random(len(m)) * np.expm1(-m))
