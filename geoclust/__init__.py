@@ -22,6 +22,7 @@ if TYPE_CHECKING:
     from geoclust.curves.randomness import clark_evans_test, loosmore_ford_test
     from geoclust.curves.second_order import k_function, l_function, pair_correlation
     from geoclust.errors import CannotTell, GeoclustError, InputError, OutputError, UsageError
+    from geoclust.fitting.assessment import Assessment, assess_fit
     from geoclust.fitting.fit import fit_clusters
     from geoclust.fitting.result import ClusterFit
     from geoclust.intensity.covariates import DistanceCovariate, RasterCovariate, coordinate_covariates
@@ -59,6 +60,8 @@ _HOMES = {
     "InputError": "geoclust.errors",
     "OutputError": "geoclust.errors",
     "UsageError": "geoclust.errors",
+    "Assessment": "geoclust.fitting.assessment",
+    "assess_fit": "geoclust.fitting.assessment",
     "fit_clusters": "geoclust.fitting.fit",
     "ClusterFit": "geoclust.fitting.result",
     "audit_survey": "geoclust.layers.survey_layers",
@@ -80,6 +83,7 @@ _HOMES = {
 }
 
 __all__ = [
+    "Assessment",
     "CannotTell",
     "CentreMap",
     "ClusterFit",
@@ -98,6 +102,7 @@ __all__ = [
     "UsageError",
     "__version__",
     "analyse",
+    "assess_fit",
     "audit_survey",
     "clark_evans_test",
     "coordinate_covariates",
