@@ -40,7 +40,7 @@ def try_rescale(data, target, table, state, work, step, rng):
         t = (np.log(new) - table.log_scale) / table.log_step
         if t < 0.0 or t > table.start.size - 1:
             return
-    exposure = recompute(data, target, state, new, work.density, work.share, table)
+    exposure = recompute(data, target, state, new, work.density, work.share, work.far, table)
     log_a = log_scale_prior(target, new) - log_scale_prior(target, old)
     # densities are relative to the peak of their kernel
     peaks = kernel_peak(target.kernel, new) / kernel_peak(target.kernel, old)
@@ -59,6 +59,7 @@ def try_rescale(data, target, table, state, work, step, rng):
         state.scalars[SCALE] = new
         state.scalars[EXPOSURE] = exposure
         state.density[:] = work.density
+        state.far[:] = work.far
         state.share[: state.number[0]] = work.share[: state.number[0]]
         state.taken[RESCALE] += 1
 
@@ -128,14 +129,14 @@ def run(data, target, table, state, work, steps, every, walk, mix, rng):
                 try_background(data, target, state, walk[1], rng)
     # take off the rounding that many small changes have left
     state.scalars[EXPOSURE] = recompute(
-        data, target, state, state.scalars[SCALE], state.density, state.share, table
+        data, target, state, state.scalars[SCALE], state.density, state.share, state.far, table
     )
     return steps
 
 
 @njit(nogil=True, cache=True)
 def draw_members(data, target, state, owner, weight, rng):
-    """Draw the centre of every point given centres and scale; -1 is the background.
+    """Draw the centre of every point given centres and scale; -1 is the background, or a centre outside D.
 
     One pass over pairs of centre and point: each candidate replaces the one
     before with probability its weight over the sum so far.
@@ -145,6 +146,8 @@ def draw_members(data, target, state, owner, weight, rng):
     per = 1.0 / (scale * scale)
     most = target.reach * target.reach
     weight[:] = state.scalars[ETA] / kernel_peak(target.kernel, scale)
+    if data.far.size > 0:
+        weight += state.far * (target.rho * data.wide_area if target.known else state.number[0])
     owner[:] = -1
     for c in range(state.number[0]):
         cx, cy = state.centres[c, 0], state.centres[c, 1]

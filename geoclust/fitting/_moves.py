@@ -13,6 +13,10 @@ and are integrated out: rho leaves Gamma(N + a) / (|D| + b)^(N + a), mu leaves
 centres, scale and background alone, and the two intensities, drawn afterwards,
 no longer hold it back.
 
+A kernel with a heavy tail is cut nowhere, and clusters whose centre lies outside D count by their
+mean: at each point, `far` times the number of centres, far being the share of the kernel outside D
+over |D|. With known parameters that number is its mean, rho |D|.
+
 Every move is reversible on its own (Green 1995, Biometrika 82: 711-732; Geyer
 & Møller 1994, Scandinavian Journal of Statistics 21: 359-373).
 """
@@ -26,7 +30,7 @@ from numba import njit
 
 from geoclust.area._edges import is_inside
 from geoclust.fitting._kernels import add_shapes, draw_offset, kernel_peak, kernel_shape
-from geoclust.fitting._table import share_at
+from geoclust.fitting._table import blend_levels, share_at
 
 
 class Data(NamedTuple):
@@ -44,6 +48,7 @@ class Data(NamedTuple):
     wide_cells: np.ndarray  # cells of it to draw uniform points from
     wide_area: float
     area: float
+    far: np.ndarray  # (levels, n) or nothing: per centre, density from outside D at tabulated scales
 
 
 class Target(NamedTuple):
@@ -74,6 +79,7 @@ class Work(NamedTuple):
     fresh: np.ndarray  # (n,) new densities of the points in those cells, in order
     density: np.ndarray  # (n,) densities under another scale
     share: np.ndarray  # (room,) shares under another scale
+    far: np.ndarray  # (n,) far density under another scale
 
 
 class State(NamedTuple):
@@ -82,6 +88,7 @@ class State(NamedTuple):
     centres: np.ndarray  # (room, 2)
     share: np.ndarray  # (room,)
     density: np.ndarray  # (n,) eta + sum of kernels at each point, relative to the kernel's peak
+    far: np.ndarray  # (n,) density from outside D that each centre stands for, relative to the peak
     number: np.ndarray  # (1,) int, centres in use
     scalars: np.ndarray  # (3,) scale, eta, sum of shares
     tried: np.ndarray  # (moves,) int
@@ -102,9 +109,14 @@ def span(low, high, cell, count):
 
 
 @njit(nogil=True, cache=True)
-def recompute(data, target, state, scale, density, share, table):
+def recompute(data, target, state, scale, density, share, far, table):
     """Densities at all points and shares of all centres from scratch; returns the sum of shares."""
-    density[:] = state.scalars[ETA] / kernel_peak(target.kernel, scale)
+    peak = kernel_peak(target.kernel, scale)
+    density[:] = state.scalars[ETA] / peak
+    if data.far.size > 0:
+        far[:] = 0.0
+        blend_levels(table, scale, data.far, 1.0 / peak, far)
+        density += far * (target.rho * data.wide_area if target.known else state.number[0])
     reach = target.reach * scale
     per = 1.0 / (scale * scale)
     most = target.reach * target.reach
@@ -131,6 +143,9 @@ def density_afresh(data, target, state, k, skip_a, skip_b, come, ax, ay, bx, by)
     most = target.reach * target.reach
     x, y = data.x[k], data.y[k]
     total = state.scalars[ETA] / kernel_peak(target.kernel, scale)
+    if data.far.size > 0:
+        rest = state.number[0] - (1 if skip_a >= 0 else 0) - (1 if skip_b >= 0 else 0) + come
+        total += state.far[k] * (target.rho * data.wide_area if target.known else rest)
     for c in range(state.number[0]):
         if c != skip_a and c != skip_b:
             dx, dy = x - state.centres[c, 0], y - state.centres[c, 1]
@@ -197,15 +212,16 @@ def exchange(data, target, state, gone, come, ax, ay, bx, by, work):
             add_shapes(target.kernel, x, y, bx, by, per, most, 1.0, part)
         at += b - a
     log_ratio, over, under, kernels = 0.0, 1.0, 1.0, 0.0
+    stand = 0.0 if target.known else float(come - gone)
     at = 0
     for j in range(j0, j1 + 1):
         a, b = data.first[j * data.columns + i0], data.first[j * data.columns + i1 + 1]
-        old, part = state.density[a:b], fresh[at : at + b - a]
+        old, far, part = state.density[a:b], state.far[a:b], fresh[at : at + b - a]
         for k in range(b - a):
             before = old[k]
             more = part[k]
             kernels += more
-            after = before + more
+            after = before + (more + stand * far[k])
             if gone > 0 and after < 1e-4 * before:
                 after = density_afresh(data, target, state, a + k, skip_a, skip_b, come, ax, ay, bx, by)
                 if after <= 0.0:

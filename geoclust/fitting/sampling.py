@@ -11,8 +11,8 @@ import numpy.typing as npt
 from geoclust.area.study_area import StudyArea
 from geoclust.curves._pairs import cell_order
 from geoclust.fitting import _chain, _kernels, _moves
-from geoclust.fitting._table import share_at
-from geoclust.fitting.shares import share_table
+from geoclust.fitting._table import sum_of_shares
+from geoclust.fitting.shares import far_densities, heavy_tailed, share_table
 from geoclust.intensity.base import Intensity
 from geoclust.models.base import ClusterModel
 from geoclust.workers import in_order
@@ -131,8 +131,14 @@ class ChainSetup:
         self.table = share_table(kind, area, self.margin, largest, workers, intensity)
         self.intensity = intensity
         self.reach = kind.reach_in_scales
-        self.data, self.order = _sorted_data(local_xy, area, self.wide, scale)
         self.target = _target(start, priors)
+        self.data, self.order = _sorted_data(local_xy, area, self.wide, scale, self.reach)
+        if heavy_tailed(kind):
+            points = np.column_stack([self.data.x, self.data.y])
+            densities, shares = far_densities(area, self.wide, points, largest, intensity)
+            self.data = self.data._replace(far=densities)
+            if not self.target.known:
+                self.table = self.table._replace(far=shares)
 
     @property
     def n(self) -> int:
@@ -154,7 +160,7 @@ class Chain:
             eta = min(setup.target.background_mean, 0.05 * setup.start.parent_intensity)
         room = int(4 * expected + n + 64)
         self.state = _moves.State(
-            np.zeros((room, 2)), np.zeros(room), np.zeros(n), np.zeros(1, np.int64),
+            np.zeros((room, 2)), np.zeros(room), np.zeros(n), np.zeros(n), np.zeros(1, np.int64),
             np.array([scale, eta, 0.0]), np.zeros(7, np.int64), np.zeros(7, np.int64),
         )  # fmt: skip
         self.walk = np.array([0.05, 0.5])
@@ -166,8 +172,9 @@ class Chain:
     def _work_arrays(self) -> None:
         n, room = self.setup.n, len(self.state.share)
         self.work = _moves.Work(
-            np.zeros(2, np.int64), np.zeros(4, np.int64), np.zeros(n), np.zeros(n), np.zeros(room)
-        )
+            np.zeros(2, np.int64), np.zeros(4, np.int64), np.zeros(n), np.zeros(n), np.zeros(room),
+            np.zeros(n),
+        )  # fmt: skip
 
     def _first_centres(self, expected: float) -> None:
         """Start from centres near random points, none left uncovered; chains start apart."""
@@ -199,7 +206,7 @@ class Chain:
     def _recompute(self) -> None:
         s = self.state
         s.scalars[_moves.EXPOSURE] = _moves.recompute(
-            self.setup.data, self.setup.target, s, s.scalars[_moves.SCALE], s.density, s.share,
+            self.setup.data, self.setup.target, s, s.scalars[_moves.SCALE], s.density, s.share, s.far,
             self.setup.table,
         )  # fmt: skip
 
@@ -274,13 +281,16 @@ def _target(start: ClusterModel, priors: Priors | None) -> _moves.Target:
 
 
 def _sorted_data(
-    local_xy: Floats, area: StudyArea, wide: StudyArea, scale: float
+    local_xy: Floats, area: StudyArea, wide: StudyArea, scale: float, reach: float
 ) -> tuple[_moves.Data, npt.NDArray[np.int32]]:
     x, y = np.ascontiguousarray(local_xy[:, 0]), np.ascontiguousarray(local_xy[:, 1])
     n = len(x)
     left, bottom = (float(x.min()), float(y.min())) if n else (0.0, 0.0)
     width, height = (float(np.ptp(x)), float(np.ptp(y))) if n else (0.0, 0.0)
     cell = max(CELL_IN_SCALES * scale, np.sqrt(width * height / (n + 16.0)), 1e-9)
+    if reach * scale > np.hypot(width, height):
+        # every centre reaches every point: one long row
+        cell = max(width, height) + 1.0
     columns, rows = int(width / cell) + 1, int(height / cell) + 1
     order, first = cell_order(x, y, left, bottom, cell, columns, rows)
     shift = wide.origin - area.origin
@@ -291,7 +301,7 @@ def _sorted_data(
     )  # fmt: skip
     data = _moves.Data(
         x[order], y[order], first, left, bottom, float(cell), columns, rows,
-        grid, wide._live_cells, wide.area, area.area,
+        grid, wide._live_cells, wide.area, area.area, np.empty((0, 0)),
     )  # fmt: skip
     return data, order
 
@@ -336,7 +346,7 @@ def collect(setup: ChainSetup, chains: list[Chain], rng: np.random.Generator) ->
 
 def _exposure(setup: ChainSetup, record: tuple[Floats, float, float, Ints]) -> float:
     centres, scale, _, _ = record
-    return float(sum(share_at(setup.table, x, y, scale) for x, y in centres))
+    return float(sum_of_shares(setup.table, centres, scale))
 
 
 def run_chains(

@@ -76,7 +76,7 @@ def run_plain(setup: ChainSetup, rng: np.random.Generator, *, warm_up: int, draw
             setup.data, target, setup.table, s, owner, mu, prior.log_scale_mean, prior.log_scale_sd, step, rng
         )
         s.scalars[EXPOSURE] = recompute(
-            setup.data, target, s, s.scalars[SCALE], s.density, s.share, setup.table
+            setup.data, target, s, s.scalars[SCALE], s.density, s.share, s.far, setup.table
         )
         rho = rng.gamma(s.number[0] + prior.rho_shape, 1.0 / (setup.wide.area + prior.rho_rate))
         mu = rng.gamma(setup.n + prior.mu_shape, 1.0 / (s.scalars[EXPOSURE] + prior.mu_rate))
