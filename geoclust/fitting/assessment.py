@@ -338,7 +338,8 @@ class Summary:
         furthest = 1.5 * spacing
         if "F" in functions:
             # open ground between clusters is wider than between points
-            furthest = float(np.clip(1.2 / np.sqrt(model.parent_intensity), furthest, 3.0 * spacing))
+            centres = float(getattr(model, model.intensity_names[0]))
+            furthest = float(np.clip(1.2 / np.sqrt(centres), furthest, 3.0 * spacing))
         radii = furthest * (np.arange(1, RADII + 1) / RADII) ** 1.5
         places = None
         if {"F", "J"} & set(functions):

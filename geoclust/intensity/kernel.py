@@ -129,13 +129,19 @@ class KernelIntensity(Intensity):
     def _cell_values(self) -> Floats:
         return self.at(self._cells.centres)
 
+    @cached_property
+    def _mean_and_highest(self) -> tuple[float, float]:
+        # simulations ask for them over and over
+        mean = float(self._cell_values @ self._cells.areas / self._cells.areas.sum())
+        return mean, float(self._cell_values.max())
+
     @property
     def mean(self) -> float:
-        return float(self._cell_values @ self._cells.areas / self._cells.areas.sum())
+        return self._mean_and_highest[0]
 
     @property
     def highest(self) -> float:
-        return float(self._cell_values.max())
+        return self._mean_and_highest[1]
 
     def draw(self, count: int, rng: np.random.Generator) -> Floats:
         return self._cells.draw(self._cell_values, count, rng)

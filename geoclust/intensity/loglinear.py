@@ -181,13 +181,19 @@ class LogLinearIntensity(Intensity):
             out[lost] = self.cell_values[self.quadrature.cells.find(at[lost])]
         return out
 
+    @cached_property
+    def _mean_and_highest(self) -> tuple[float, float]:
+        # simulations ask for them over and over
+        mean = float(self.cell_values @ self.quadrature.cells.areas / self.quadrature.cells.areas.sum())
+        return mean, float(self.cell_values.max())
+
     @property
     def mean(self) -> float:
-        return float(self.cell_values @ self.quadrature.cells.areas / self.quadrature.cells.areas.sum())
+        return self._mean_and_highest[0]
 
     @property
     def highest(self) -> float:
-        return float(self.cell_values.max())
+        return self._mean_and_highest[1]
 
     def at_own_points(self) -> Floats:
         return self.at(self.points + self.area.origin)
