@@ -110,7 +110,8 @@ _DECLARED = (
            metavar="NAME"),
     Option("--simulations", "Random patterns for the envelopes, at least 39.", default=999,
            kind=click.IntRange(min=39), metavar="COUNT"),
-    Option("--method", "Way of fitting, minimum-contrast the quick look; a wrong name lists all.",
+    Option("--method", "Way of fitting: posterior, or a quick look by minimum-contrast, palm or "
+           "composite-likelihood.",
            default="posterior", kind=str, metavar="NAME"),
     Option("--background", "Points may belong to no cluster (posterior only)."),
     Option("--chains", "Chains of the sampler, at least 2.", default=4, kind=click.IntRange(min=2),

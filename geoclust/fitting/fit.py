@@ -8,7 +8,8 @@ from dataclasses import replace
 import numpy as np
 
 from geoclust.area.survey import Survey
-from geoclust.errors import not_allowed
+from geoclust.errors import UsageError, not_allowed
+from geoclust.fitting.likelihood_fits import FORMS, fit_by_likelihood
 from geoclust.fitting.moments import ContrastChoices, fit_by_contrast
 from geoclust.fitting.posterior import fit_by_posterior
 from geoclust.fitting.result import ClusterFit
@@ -17,7 +18,7 @@ from geoclust.models.catalogue import model_by_name
 
 Progress = Callable[[str, int, int], None]
 
-METHODS = ("posterior", "minimum-contrast")
+METHODS = ("posterior", "minimum-contrast", *FORMS)
 
 
 def fit_clusters(
@@ -48,9 +49,12 @@ def fit_clusters(
         Name of the model, such as ``thomas``.
     method
         ``posterior`` (centres, memberships and parameters sampled together; Møller &
-        Waagepetersen 2004) or ``minimum-contrast`` (Diggle & Gratton 1984), the quick look.
+        Waagepetersen 2004), or one of the quick looks: ``minimum-contrast`` (Diggle & Gratton
+        1984), ``palm`` (Palm likelihood; Tanaka, Ogata & Stoyan 2008) or ``composite-likelihood``
+        (of pairs of points; Guan 2006).
     function
-        Curve that the contrast is taken on: ``g`` or ``K``. The posterior starts from that fit.
+        Curve that the contrast is taken on: ``g`` or ``K``. The posterior starts from that fit; the
+        likelihoods of pairs take no curve.
     r_max, r_min
         Range of distances in metres; chosen from a first fit if not given.
     exponent
@@ -58,7 +62,8 @@ def fit_clusters(
     bandwidth
         Half width of the kernel of g, metres; 0.15 mean spacings if not given.
     bootstrap
-        Patterns simulated for the intervals of the contrast; 0 for none, otherwise at least 39.
+        Patterns simulated for the intervals of all but the posterior; 0 for none, otherwise at least
+        39.
     background
         Whether points may belong to no cluster (posterior only).
     chains
@@ -91,7 +96,7 @@ def fit_clusters(
     if chains < 2:
         raise not_allowed("chains", "at least 2, so that they can be compared", chains)
     if background and method != "posterior":
-        raise not_allowed("background", "false for a contrast fit, which cannot see it", background)
+        raise not_allowed("background", f"false for {method}, which cannot see it", background)
     choices = ContrastChoices(function, r_max, r_min, exponent, bandwidth)
     if method == "posterior":
         sampled = fit_by_posterior(
@@ -99,6 +104,16 @@ def fit_clusters(
             rng=np.random.default_rng(rng), workers=workers, progress=progress, intensity=intensity,
         )  # fmt: skip
         return replace(sampled, seed=rng if isinstance(rng, int) else None, intensity=intensity)
+    if method in FORMS:
+        if intensity is not None:
+            raise UsageError(
+                f"{method} takes no intensity; use one of the methods that do: posterior, minimum-contrast."
+            )
+        paired = fit_by_likelihood(
+            survey, kind, method, choices=choices, bootstrap=bootstrap, rng=np.random.default_rng(rng),
+            workers=workers, progress=progress,
+        )  # fmt: skip
+        return replace(paired, seed=rng if isinstance(rng, int) else None)
     found = fit_by_contrast(
         survey, kind, choices=choices, bootstrap=bootstrap, rng=np.random.default_rng(rng),
         workers=workers, progress=progress, intensity=intensity,

@@ -10,6 +10,7 @@ import numpy.typing as npt
 from geoclust.curves.curve import Curve
 from geoclust.fitting.contrast import ContrastSurface
 from geoclust.fitting.convergence import Sample
+from geoclust.fitting.pair_likelihoods import LikelihoodSurface
 from geoclust.intensity.base import Intensity
 from geoclust.models.base import ClusterModel
 
@@ -39,7 +40,7 @@ class ClusterFit:
     fitted
         the model's.
     surface
-        Contrast over parent intensity and scale.
+        Contrast, or loss of log-likelihood, over parent intensity and scale.
     draws
         Bootstrap or posterior draws of each parameter, (m,) each.
     seed
@@ -58,7 +59,7 @@ class ClusterFit:
     choices: dict[str, object]
     curve: Curve
     fitted: Floats
-    surface: ContrastSurface | None = None
+    surface: ContrastSurface | LikelihoodSurface | None = None
     draws: dict[str, Floats] = field(default_factory=dict, repr=False)
     seed: int | None = None
     sample: Sample | None = field(default=None, repr=False)

@@ -1,4 +1,4 @@
-"""Figures that are no maps: curves, the surface of the contrast, numbers of centres, zones."""
+"""Figures that are no maps: curves, the surface of the fit, numbers of centres, zones."""
 
 from __future__ import annotations
 
@@ -9,6 +9,8 @@ from matplotlib.figure import Figure
 from matplotlib.ticker import FuncFormatter, MaxNLocator
 from scipy.interpolate import RectBivariateSpline
 
+from geoclust.fitting.contrast import ContrastSurface
+from geoclust.fitting.pair_likelihoods import LikelihoodSurface
 from geoclust.report import canvas
 from geoclust.report.canvas import Floats
 
@@ -18,7 +20,6 @@ if TYPE_CHECKING:
 
     from geoclust.centres.result import CentreMap
     from geoclust.curves.envelopes import EnvelopeTest
-    from geoclust.fitting.contrast import ContrastSurface
     from geoclust.fitting.result import ClusterFit
 
 _SIZE = (5.2, 3.6)
@@ -76,20 +77,27 @@ def _band_label(test: EnvelopeTest) -> str:
     return "range of what covariates explain"
 
 
+def surface_figure(fit: ClusterFit) -> Figure | None:
+    """The surface of the fit over parent intensity and scale; None if it has none."""
+    return likelihood_figure(fit) if isinstance(fit.surface, LikelihoodSurface) else contrast_figure(fit)
+
+
 def contrast_figure(fit: ClusterFit) -> Figure | None:
     """The contrast over parent intensity and scale, its lowest place and the valley round it.
 
     None if the fit has no such surface.
     """
     surface = fit.surface
-    if surface is None:
+    if not isinstance(surface, ContrastSurface):
         return None
-    best = np.array([fit.parameters["parent_intensity"] * 1e4, fit.parameters[surface.scale_name]])
-    cloud = _draws(fit, surface.scale_name)
-    rho, scales, ratio = _fine(surface, np.vstack([best, cloud]))
+    cloud = _draws(fit, surface.scale_name) if fit.sample is not None else np.empty((0, 2))
+    # a ratio is a difference of logarithms
+    height = np.log(np.maximum(surface.contrast, 1e-300))
+    rho, scales, above = _fine(surface, height, height.min() + np.log(4.0), _shown(fit, cloud))
+    ratio = np.exp(above)
+    top = min(max(float(np.nanmax(ratio)), 2.0), 32.0)
     with canvas.look():
         figure, ax = _axes()
-        top = min(max(float(np.nanmax(ratio)), 2.0), 32.0)
         # dark is low: the valley is the deep part
         ax.contourf(rho, scales, np.minimum(ratio, top).T, levels=np.geomspace(1.0, top, 13),
                     cmap=canvas.RAMP_COLOURS.reversed(), extend="max", norm="log")  # fmt: skip
@@ -97,21 +105,71 @@ def contrast_figure(fit: ClusterFit) -> Figure | None:
         widths = [2.0 if level == VALLEY else 0.8 for level in lines]
         drawn = ax.contour(rho, scales, ratio.T, levels=lines, colors="white", linewidths=widths)
         ax.clabel(drawn, levels=lines[1:], fmt=lambda v: f"× {v:g}", fontsize=8)
-        if len(cloud):
-            ax.plot(*cloud.T, ".", ms=3, mfc="white", mec=canvas.INK, mew=0.3, label="draws of the posterior")
-        ax.plot(*best, "o", ms=8, mfc=canvas.UNSURE, mec="white", mew=1.4, label="estimate")
-        ax.set_xscale("log")
-        ax.set_yscale("log")
-        ax.set_xlim(rho[0], rho[-1])
-        ax.set_ylim(scales[0], scales[-1])
-        for axis in (ax.xaxis, ax.yaxis):
-            axis.set_major_formatter(FuncFormatter(lambda v, _: f"{v:g}"))
-            axis.set_minor_formatter(FuncFormatter(_one_two_five))
-            axis.set_tick_params(which="minor", labelsize=9)
-        ax.set_xlabel("cluster centres per hectare (ha⁻¹)")
-        ax.set_ylabel(f"{surface.scale_name.replace('_', ' ')} (m)")
-        ax.legend(loc="upper right", frameon=True, framealpha=0.85, edgecolor="none", handletextpad=0.2)
+        _finish_surface(ax, fit, surface, (rho, scales), cloud, "draws of the posterior")
         return figure
+
+
+def likelihood_figure(fit: ClusterFit) -> Figure | None:
+    """What is lost in log-likelihood over parent intensity and scale, with the bootstrap's estimates.
+
+    The bold line is the loss that 95 % of these do not exceed. None if the fit has no such surface.
+    """
+    surface = fit.surface
+    if not isinstance(surface, LikelihoodSurface):
+        return None
+    cloud = _draws(fit, surface.scale_name)
+    bold = surface.level
+    unit = bold if bold else 4.0
+    rho, scales, above = _fine(surface, surface.loss, 2.0 * unit, _shown(fit, cloud))
+    # equal steps of the root of the loss are equal steps on the ground round the estimate
+    root = np.sqrt(np.maximum(above, 0.0))
+    top = min(float(np.nanmax(root)), 6.0 * float(np.sqrt(unit)))
+    with canvas.look():
+        figure, ax = _axes()
+        ax.contourf(rho, scales, np.minimum(root, top).T, levels=np.linspace(0.0, top, 13),
+                    cmap=canvas.RAMP_COLOURS.reversed(), extend="max")  # fmt: skip
+        thin = [float(f"{unit * k:.1g}") for k in (3.0, 9.0)]
+        drawn = ax.contour(rho, scales, above.T, levels=thin, colors="white", linewidths=0.8)
+        ax.clabel(drawn, fmt=lambda v: f"− {v:g}", fontsize=8)
+        if bold:
+            ax.contour(rho, scales, above.T, levels=[bold], colors="white", linewidths=2.0)
+        _finish_surface(ax, fit, surface, (rho, scales), cloud, "estimates of the bootstrap")
+        return figure
+
+
+def _finish_surface(
+    ax: Axes,
+    fit: ClusterFit,
+    surface: ContrastSurface | LikelihoodSurface,
+    limits: tuple[Floats, Floats],
+    cloud: Floats,
+    label: str,
+) -> None:
+    """Draws, estimate, logarithmic axes and key of a surface."""
+    if len(cloud):
+        ax.plot(*cloud.T, ".", ms=3, mfc="white", mec=canvas.INK, mew=0.3, label=label)
+    ax.plot(*_estimate(fit), "o", ms=8, mfc=canvas.UNSURE, mec="white", mew=1.4, label="estimate")
+    ax.set_xscale("log")
+    ax.set_yscale("log")
+    ax.set_xlim(limits[0][0], limits[0][-1])
+    ax.set_ylim(limits[1][0], limits[1][-1])
+    for axis in (ax.xaxis, ax.yaxis):
+        axis.set_major_formatter(FuncFormatter(lambda v, _: f"{v:g}"))
+        axis.set_minor_formatter(FuncFormatter(_one_two_five))
+        axis.set_tick_params(which="minor", labelsize=9)
+    ax.set_xlabel("cluster centres per hectare (ha⁻¹)")
+    ax.set_ylabel(f"{surface.scale_name.replace('_', ' ')} (m)")
+    ax.legend(loc="upper right", frameon=True, framealpha=0.85, edgecolor="none", handletextpad=0.2)
+
+
+def _estimate(fit: ClusterFit) -> Floats:
+    """Centres per hectare and scale of the fit."""
+    assert fit.surface is not None
+    return np.array([fit.parameters["parent_intensity"] * 1e4, fit.parameters[fit.surface.scale_name]])
+
+
+def _shown(fit: ClusterFit, cloud: Floats) -> Floats:
+    return np.vstack([_estimate(fit), cloud])
 
 
 def number_figure(centres: CentreMap) -> Figure:
@@ -187,29 +245,40 @@ def _span(*curves: Floats) -> tuple[float, float]:
 
 
 def _draws(fit: ClusterFit, scale_name: str, most: int = 400) -> Floats:
-    """Up to `most` posterior draws, (k, 2): centres per hectare and scale."""
-    if fit.sample is None:
+    """Up to `most` draws, (k, 2): centres per hectare and scale."""
+    if not fit.draws:
         return np.empty((0, 2))
     both = np.column_stack([fit.draws["parent_intensity"] * 1e4, fit.draws[scale_name]])
     return both[:: max(1, int(np.ceil(len(both) / most)))]
 
 
-def _fine(surface: ContrastSurface, shown: Floats) -> tuple[Floats, Floats, Floats]:
+def _fine(
+    surface: ContrastSurface | LikelihoodSurface, height: Floats, valley: float, shown: Floats
+) -> tuple[Floats, Floats, Floats]:
     """The part of the surface with its valley and all that is `shown`, interpolated.
 
-    Returns centres per hectare (a,), scale in metres (b,), contrast in units of the least (a, b).
+    Parameters
+    ----------
+    surface
+        Its axes.
+    height
+        (a, b) height at the nodes; the valley is what lies below `valley`.
+    valley
+        Height.
+    shown
+        (k, 2) centres per hectare and scale.
+
+    Returns centres per hectare (a,), scale in metres (b,), height above the lowest (a, b).
     """
     x, y = np.log(surface.parent_intensities * 1e4), np.log(surface.scales)
-    height = np.log(np.maximum(surface.contrast, 1e-300))
-    low = height < height.min() + np.log(4.0)
+    low = height <= max(valley, float(height.min()))
+    inside = [np.asarray(np.any(low, axis=k)) for k in (1, 0)]
     smooth = RectBivariateSpline(x, y, height)
-    across, up = (
-        np.linspace(*_window(v, low.any(axis=k), np.log(shown[:, 1 - k])), 181) for v, k in ((x, 1), (y, 0))
-    )
+    across, up = (np.linspace(*_window(v, inside[k], np.log(shown[:, k])), 181) for k, v in enumerate((x, y)))
     fine = smooth(across, up)
     # between the nodes a spline may dip below its lowest node: that is the least then
     least = min(float(fine.min()), float(height.min()))
-    return np.exp(across), np.exp(up), np.exp(fine - least)
+    return np.exp(across), np.exp(up), fine - least
 
 
 def _window(values: Floats, low: np.ndarray, also: Floats) -> tuple[float, float]:

@@ -69,6 +69,27 @@ _POSTERIOR = Step(
     "Møller & Waagepetersen 2004; van Lieshout & Baddeley 2002; Diggle & Gratton 1984; Geyer & Møller 1994; "
     "Green 1995",
 )
+_BOOTSTRAP = (
+    " The intervals come from a parametric bootstrap: patterns are drawn from the fit in the same study area "
+    "and fitted again, choice of the range included; the middle 95 % of the new values are the interval."
+)
+_PALM = Step(
+    "Fit",
+    "The parameters maximise the Palm likelihood: the other points seen from each point count as a Poisson "
+    "process, as dense as the pair correlation function of the model says, up to the distance R. The share "
+    "of the surroundings of each point that lies in the study area is exact. The intensity is n/|W|."
+    + _BOOTSTRAP,
+    ("ℓ(θ) = Σ ln(λ g(d; θ)) − λ Σ ∫₀ᴿ g(r; θ) 2πr share(x, r) dr, over pairs with d < R and points x",),
+    "Tanaka, Ogata & Stoyan 2008",
+)
+_COMPOSITE = Step(
+    "Fit",
+    "The parameters maximise a second-order composite likelihood: the probability of the distances of all "
+    "pairs of points up to R, as if pairs were independent of each other. The set covariance γ̄ of the study "
+    "area, averaged over directions, is exact." + _BOOTSTRAP,
+    ("ℓ(θ) = Σ ln g(d; θ) − m ln ∫₀ᴿ g(r; θ) 2πr γ̄(r) dr, over the m ordered pairs with d < R",),
+    "Guan 2006",
+)
 _SAMPLED = Step(
     "Centres",
     "The maps and numbers are averages over the same posterior sample; their intervals hold the uncertainty "
@@ -106,7 +127,12 @@ _AGREE = Step(
     "Vehtari et al. 2021",
 )
 
-_FITS = {"minimum-contrast": _CONTRAST, "posterior": _POSTERIOR}
+_FITS = {
+    "minimum-contrast": _CONTRAST,
+    "posterior": _POSTERIOR,
+    "palm": _PALM,
+    "composite-likelihood": _COMPOSITE,
+}
 
 _MODELS: dict[str, tuple[str, tuple[str, ...]]] = {
     "thomas": (
@@ -161,6 +187,8 @@ REFERENCES: tuple[str, ...] = (
     "Scandinavian Journal of Statistics 21: 359–373",
     "Green PJ (1995) Reversible jump Markov chain Monte Carlo computation and Bayesian model determination. "
     "Biometrika 82: 711–732",
+    "Guan Y (2006) A composite likelihood approach in fitting spatial point process models. Journal of the "
+    "American Statistical Association 101: 1502–1512",
     "Guan Y (2007) A least-squares cross-validation bandwidth selection approach in pair correlation "
     "function "
     "estimations. Statistics and Probability Letters 77: 1722–1729",
@@ -174,6 +202,8 @@ REFERENCES: tuple[str, ...] = (
     "Operationsforschung und Statistik, Series Statistics 14: 63–71",
     "Ripley BD (1977) Modelling spatial patterns. Journal of the Royal Statistical Society B 39: 172–212",
     "Stoyan D, Stoyan H (1994) Fractals, random shapes and point fields. Wiley",
+    "Tanaka U, Ogata Y, Stoyan D (2008) Parameter estimation and model selection for Neyman-Scott point "
+    "processes. Biometrical Journal 50: 43–57",
     "Thomas M (1949) A generalization of Poisson's binomial limit for use in ecology. Biometrika 36: 18–25",
     "van Lieshout MNM, Baddeley AJ (2002) Extrapolating and interpolating spatial patterns. In: Spatial "
     "cluster "

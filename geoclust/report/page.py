@@ -12,6 +12,7 @@ from jinja2 import Environment, PackageLoader, StrictUndefined
 from markupsafe import Markup, escape
 
 from geoclust.errors import OutputError
+from geoclust.fitting.pair_likelihoods import LikelihoodSurface
 from geoclust.layers.audit import area_text
 from geoclust.report import answer, canvas, effects, figures, maps, method, tables, words
 
@@ -236,6 +237,35 @@ def _maps(pictures: _Pictures, survey: Survey, centres: CentreMap | None) -> lis
     return found
 
 
+def _surface_words(fit: ClusterFit, ok: bool) -> tuple[str, str]:
+    """Alternative text and reading of the surface of a fit."""
+    reading = "How well the data fix the answer: the golden dot is " + (
+        "the estimate" if ok else "where the search ended"
+    )
+    valley = (
+        ", and a long dark valley means that few wide and many narrow clusters cannot be told apart by it"
+    )
+    if isinstance(fit.surface, LikelihoodSurface):
+        if fit.surface.level is not None:
+            reading += (
+                ", the small dots are the estimates of the bootstrap; the bold line goes round the places "
+                "that fit the pairs of points nearly as well: 95 % of the bootstrap's estimates lose no more "
+                "than "
+                f"{fit.surface.level:.3g} in log-likelihood; the thin lines tell larger losses"
+            )
+        else:
+            reading += "; the lines tell what other places lose in log-likelihood"
+        alt = "Contour plot of the loss of likelihood over cluster centres per hectare and size of a cluster."
+        return alt, reading + valley
+    reading += (
+        ", any other place inside the bold line fits the curve nearly as well (contrast up to 1.25 times the "
+        "least)" + valley
+    )
+    if fit.sample is not None:
+        reading += "; the small dots are draws from the posterior, which uses more than the curve"
+    return "Contour plot of the contrast over cluster centres per hectare and size of a cluster.", reading
+
+
 def _charts(
     pictures: _Pictures,
     envelopes: Mapping[str, EnvelopeTest] | None,
@@ -273,19 +303,9 @@ def _charts(
         )
         found.append(pictures.take(figures.curve_figure(test, fit=fit if ok else None), alt, reading))
     if fit is not None:
-        surface = figures.contrast_figure(fit)
+        surface = figures.surface_figure(fit)
         if surface is not None:
-            reading = (
-                "How well the data fix the answer: the golden dot is "
-                + ("the estimate" if ok else "where the search ended")
-                + ", any other place inside the bold line fits the curve nearly as well (contrast up to 1.25 "
-                "times the least), and a long dark valley means that few wide and many narrow clusters "
-                "cannot be told "
-                "apart by it"
-            )
-            if fit.sample is not None:
-                reading += "; the small dots are draws from the posterior, which uses more than the curve"
-            alt = "Contour plot of the contrast over cluster centres per hectare and size of a cluster."
+            alt, reading = _surface_words(fit, ok)
             found.append(pictures.take(surface, alt, reading + "."))
     if centres is not None:
         mean, low, high = centres.interval_inside()

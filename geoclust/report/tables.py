@@ -124,6 +124,8 @@ _CHOICE_NAMES = {
     "r_min_m": "smallest distance",
     "range_chosen_by": "range of the fit chosen by",
     "contrast": "contrast at the minimum",
+    "pairs": "pairs of points within that range",
+    "log_likelihood_over_randomness": "log-likelihood of the pairs over that of complete randomness",
     "bootstrap": "patterns for the intervals (parametric bootstrap)",
     "pilot": "values to start from",
     "pilot_function": "curve that they were fitted on",
