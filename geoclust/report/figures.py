@@ -91,10 +91,7 @@ def contrast_figure(fit: ClusterFit) -> Figure | None:
     if not isinstance(surface, ContrastSurface):
         return None
     cloud = _draws(fit, surface.scale_name) if fit.sample is not None else np.empty((0, 2))
-    # a ratio is a difference of logarithms
-    height = np.log(np.maximum(surface.contrast, 1e-300))
-    rho, scales, above = _fine(surface, height, height.min() + np.log(4.0), _shown(fit, cloud))
-    ratio = np.exp(above)
+    rho, scales, ratio = _ratio(surface, _shown(fit, cloud))
     top = min(max(float(np.nanmax(ratio)), 2.0), 32.0)
     with canvas.look():
         figure, ax = _axes()
@@ -250,6 +247,14 @@ def _draws(fit: ClusterFit, scale_name: str, most: int = 400) -> Floats:
         return np.empty((0, 2))
     both = np.column_stack([fit.draws["parent_intensity"] * 1e4, fit.draws[scale_name]])
     return both[:: max(1, int(np.ceil(len(both) / most)))]
+
+
+def _ratio(surface: ContrastSurface, shown: Floats) -> tuple[Floats, Floats, Floats]:
+    """Centres per hectare (a,), scale in metres (b,), contrast in units of the least (a, b)."""
+    # a ratio is a difference of logarithms
+    height = np.log(np.maximum(surface.contrast, 1e-300))
+    rho, scales, above = _fine(surface, height, height.min() + np.log(4.0), shown)
+    return rho, scales, np.exp(above)
 
 
 def _fine(

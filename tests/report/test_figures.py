@@ -131,7 +131,7 @@ def test_template_in_another_system_is_drawn_where_it_lies(example):
 
 
 def test_best_fit_lies_in_the_valley(example):
-    rho, scales, ratio = figures._fine(example.fit.surface, np.empty((0, 2)))
+    rho, scales, ratio = figures._ratio(example.fit.surface, np.empty((0, 2)))
     a = np.abs(np.log(rho / (example.fit.parameters["parent_intensity"] * 1e4))).argmin()
     b = np.abs(np.log(scales / example.fit.parameters["sigma"])).argmin()
     assert ratio.min() >= 1
