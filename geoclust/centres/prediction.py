@@ -9,6 +9,7 @@ import shapely
 
 from geoclust.area.study_area import StudyArea
 from geoclust.fitting.sampling import ChainSetup, Draws
+from geoclust.fitting.shares import heavy_tailed, share_beyond
 from geoclust.intensity.base import Intensity
 from geoclust.intensity.cells import Cells
 
@@ -90,6 +91,15 @@ def _thinning(part: StudyArea, intensity: Intensity | None) -> tuple[float, floa
     return 1.1 * float(values.max()), float(values.mean(axis=1) @ cells.areas / part.area)
 
 
+def _share_from_further(part: StudyArea, wide: StudyArea, setup: ChainSetup, scales: Floats) -> Floats:
+    """Share of the points of a part whose centre lies further out than any that is drawn, by scale."""
+    union = StudyArea(_polygon_part(wide.polygon.union(setup.wide.polygon)), setup.area.crs)
+    # fixed seed: the points are a quadrature, not a sample
+    at = part.uniform_points(200, 2013) - union.origin
+    known = np.geomspace(scales.min(), scales.max(), 12)
+    return np.interp(scales, known, [float(share_beyond(union, at, s).mean()) for s in known])
+
+
 def predict_unsurveyed(
     unsurveyed: gpd.GeoDataFrame, setup: ChainSetup, draws: Draws, rng: np.random.Generator
 ) -> gpd.GeoDataFrame:
@@ -99,6 +109,7 @@ def predict_unsurveyed(
     offspring there (independent of those seen, as numbers in disjoint regions
     are), new centres are drawn where none were sampled, and background points
     are added. Parts inside the study area are cut off first: they were walked.
+    With a heavy tail, centres further out than those drawn count by their mean.
 
     Adds `area_ha` (of the part not walked), `points_mean`, `points_low`,
     `points_high` and the same for centres (95 % prediction intervals).
@@ -119,9 +130,13 @@ def predict_unsurveyed(
         wide = part.dilated(setup.margin)
         beyond = _polygon_part(wide.polygon.difference(setup.wide.polygon))
         outer = None if beyond.is_empty else StudyArea(beyond, area.crs)
+        heavy = heavy_tailed(kind)
+        further = np.zeros(len(flat))
+        if heavy:
+            further = _share_from_further(part, wide, setup, draws.scale.ravel())
         for m, (known, scale, rho, mu, epsilon) in enumerate(flat):
             where = known + area.origin
-            where = where[wide.contains(where)]
+            where = where if heavy else where[wide.contains(where)]
             if outer is not None:
                 fresh = outer.uniform_points(int(rng.poisson(rho * outer.area)), rng)
                 where = np.concatenate([where, fresh])
@@ -133,5 +148,6 @@ def predict_unsurveyed(
             if intensity is not None:
                 there = intensity.at(offspring[held]) / intensity.mean
                 held[held] = rng.random(len(there)) * most < there
-            points[k, m] = held.sum() + rng.poisson(epsilon * mean * part.area)
+            spread = epsilon + rho * mu * further[m]
+            points[k, m] = held.sum() + rng.poisson(spread * mean * part.area)
     return _with_numbers(unsurveyed, parts, {**_summary(points, "points"), **_summary(centres, "centres")})
