@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
-STEPS = ("curves", "fit", "centres", "patterns", "terrain", "description")
+STEPS = ("curves", "fit", "centres", "patterns", "terrain", "description", "assessment", "comparison")
 """Steps that draw random numbers; the order is part of what a seed means."""
 
 

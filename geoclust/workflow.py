@@ -12,6 +12,7 @@ import geopandas as gpd
 import numpy as np
 import pandas as pd
 
+from geoclust.analysis import Analysis
 from geoclust.area.study_area import StudyArea
 from geoclust.area.survey import Survey
 from geoclust.centres.locate import locate_centres
@@ -21,6 +22,7 @@ from geoclust.curves.curve import Curve
 from geoclust.curves.envelopes import EnvelopeTest, randomness_envelopes
 from geoclust.curves.second_order import default_radii, k_function
 from geoclust.errors import CannotTell, OutputError, UsageError, not_allowed
+from geoclust.fitting.assessment import Assessment, assess_fit
 from geoclust.fitting.fit import fit_clusters
 from geoclust.fitting.result import ClusterFit
 from geoclust.intensity.covariates import Covariate
@@ -32,13 +34,15 @@ from geoclust.layers.results_folder import results_folder
 from geoclust.layers.survey_layers import PathLike, read_polygons, read_survey_layers
 from geoclust.models.catalogue import model_by_name
 from geoclust.report.page import write_page
-from geoclust.report.record import add_terrain, fit_record, library_versions, write_record
+from geoclust.report.record import add_assessment, add_terrain, fit_record, library_versions, write_record
 from geoclust.seeds import stream
 from geoclust.simulation.patterns import simulate_patterns
 from geoclust.terrain import RASTER, Terrain, explain, read_covariates
 
 Progress = Callable[[str, int, int], None]
 
+# patterns that are refitted in the assessment of the fit: a part of those of the envelopes, and bounds
+REFITS = (10, 19, 99)
 # patterns in the layer simulated_points: enough to judge by eye, small enough to open
 PATTERNS = 39
 
@@ -47,7 +51,8 @@ FILES = (
     ("results.gpkg", "points with their cluster, study area, clusters, zones, simulated points; for a GIS"),
     ("centre_intensity.tif", "raster of expected centres per hectare, its standard deviation, and the "
                              "probability of at least one centre in the cell"),
-    ("curves.csv", "the curves L and g with their envelopes, and the curve that the model was fitted on"),
+    ("curves.csv", "the curves L and g with their envelopes, the curve that the model was fitted on, and the "
+                   "curve that it is judged by"),
     ("fit.json", "parameters, intervals, status, choices and data audit for other programs"),
     ("*.sld", "styles for raster and layers (OGC Styled Layer Descriptor)"),
 )  # fmt: skip
@@ -101,70 +106,6 @@ def read_survey(
     return Survey(
         found.xy, StudyArea(found.polygon, found.crs), attributes=found.attributes, audit=found.audit
     )
-
-
-@dataclass(frozen=True, eq=False)
-class Analysis:
-    """What an analysis found.
-
-    Attributes
-    ----------
-    status, reason
-        ``ok``, or why the data cannot tell, and the sentence.
-    survey, envelopes, fit, centres
-        Results of the steps; None where a step had nothing to say.
-    terrain
-        What covariates explain, if there were any.
-    choices, seed
-        What was chosen on the way.
-    out
-        Folder that holds the results.
-    """
-
-    status: str
-    reason: str
-    survey: Survey
-    envelopes: dict[str, EnvelopeTest]
-    fit: ClusterFit | None
-    centres: CentreMap | None
-    choices: dict[str, object]
-    seed: int
-    out: Path
-    notes: list[str] = field(default_factory=list)
-    terrain: Terrain | None = None
-
-    def lines(self) -> list[str]:
-        """The answer in a few lines of text."""
-        survey = self.survey
-        out = [
-            f"{survey.n:,} points in {survey.area.area / 1e4:,.2f} ha ({survey.intensity * 1e4:.3g} per ha)"
-        ]
-        if "L" in self.envelopes:
-            test = self.envelopes["L"]
-            out.append(f"complete randomness: p = {test.p_value:.3g} ({test.simulations} simulations, L)")
-        if self.terrain is not None:
-            out += self.terrain.lines()
-        if self.fit is not None and self.status == "ok":
-            for p in self.fit.model.described:
-                factor, unit = (1e4, "ha⁻¹") if p.per_area else (1.0, "" if p.unit == "1" else p.unit)
-                text = (
-                    f"{p.name.replace('_', ' ')}: {self.fit.parameters[p.name] * factor:.4g} {unit}".rstrip()
-                )
-                if p.name in self.fit.intervals:
-                    low, high = self.fit.intervals[p.name]
-                    text += f" (95 %: {low * factor:.4g} to {high * factor:.4g})"
-                out.append(text)
-        if self.centres is not None:
-            mean, low, high = self.centres.interval_inside()
-            out.append(f"cluster centres in the study area: {mean:.1f} (95 %: {low:.0f} to {high:.0f})")
-            if not self.centres.converged:
-                out.append(
-                    f"the chains do not agree yet (R-hat {self.centres.r_hat:.3f}, effective sample size "
-                    f"{self.centres.effective_sample_size:.0f}): take the map with caution"
-                )
-        if self.status != "ok":
-            out.append(f"cannot tell ({self.status}): {self.reason}")
-        return [*out, *self.notes, f"results in {self.out}"]
 
 
 @dataclass(frozen=True)
@@ -316,6 +257,7 @@ def _analyse_survey(
     envelopes: dict[str, EnvelopeTest] = {}
     fit: ClusterFit | None = None
     centres: CentreMap | None = None
+    assessment: Assessment | None = None
     status, reason = "ok", ""
     notes = list(extras.warnings)
     choices: dict[str, object] = {"edge_weight": "isotropic", "model": model, "simulations": simulations}
@@ -352,13 +294,20 @@ def _analyse_survey(
             )  # fmt: skip
         status, reason = fit.status, fit.reason
         if fit.ok:
+            part, least, most = REFITS
+            assessment = assess_fit(
+                survey, fit, simulations=min(max(simulations // part, least), most),
+                rng=stream(seed, "assessment"), workers=workers, progress=progress,
+            )  # fmt: skip
             centres = locate_centres(
                 survey, fit, cell=cell, like=extras.grid, zones=extras.zones, unsurveyed=extras.unsurveyed,
                 rng=centre_seed, workers=workers, progress=progress,
             )  # fmt: skip
     except CannotTell as verdict:
         status, reason = verdict.status, str(verdict)
-    return Analysis(status, reason, survey, envelopes, fit, centres, choices, seed, out, notes, terrain)
+    return Analysis(
+        status, reason, survey, envelopes, fit, centres, choices, seed, out, notes, terrain, assessment
+    )
 
 
 def curve_table(
@@ -397,10 +346,13 @@ def _write_all(
     terrain = found.terrain
     if terrain is not None:
         add_terrain(record, terrain.intensity, terrain.envelopes)
+    if found.assessment is not None:
+        add_assessment(record, found.assessment)
     write_record(folder / "fit.json", record)
     try:
         table = curve_table(found.envelopes, fit, survey)
         frames = [] if terrain is None else terrain.frames()
+        frames += [] if found.assessment is None else found.assessment.frames()
         pd.concat([table, *frames], ignore_index=True).to_csv(folder / "curves.csv", index=False)
     except OSError as error:
         raise OutputError(f"curves.csv could not be written: {error.strerror}.") from error
@@ -436,6 +388,7 @@ def _write_all(
         reason=found.reason,
         centres=centres,
         terrain=None if terrain is None else (terrain.intensity, terrain.envelopes),
+        assessment=found.assessment,
         choices=found.choices | {"seed": found.seed},
         versions=library_versions(),
         command=command,

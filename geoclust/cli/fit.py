@@ -17,7 +17,7 @@ from geoclust.errors import CannotTell
 @click.command(short_help="Fit a cluster model: how large, how many, how sure.")
 @survey_arguments
 @takes(*READING, "model", "method", "background", "chains", "function", "r_min", "r_max", "exponent")
-@takes("bandwidth", "bootstrap", "json")
+@takes("bandwidth", "bootstrap", "assess", "json")
 @out_option("Write the fit as JSON to this file, for --fit of locate and simulate.")
 @takes("seed", "overwrite", *RUNNING)
 def fit(
@@ -39,6 +39,7 @@ def fit(
     exponent: float | None,
     bandwidth: float | None,
     bootstrap: int,
+    assess: bool,
     **reading: Any,
 ) -> int:
     """Fit a cluster model, with 95 % intervals and a verdict whether the data can tell.
@@ -47,8 +48,9 @@ def fit(
     tell.
     """
     from geoclust import workflow
+    from geoclust.fitting.assessment import assess_fit
     from geoclust.fitting.fit import fit_clusters
-    from geoclust.report.record import fit_record
+    from geoclust.report.record import add_assessment, fit_record
     from geoclust.report.tables import text_lines
     from geoclust.seeds import stream
 
@@ -70,12 +72,19 @@ def fit(
             status=status, reason=reason, fit=found, envelopes=None, centres=None, audit=survey.audit,
             choices={"model": model}, seed=used,
         )  # fmt: skip
+        assessment = None
+        if assess and found is not None and status == "ok":
+            assessment = assess_fit(
+                survey, found, rng=stream(used, "assessment"), workers=workers, progress=talk.progress
+            )
+            add_assessment(record, assessment)
         if out is not None:
             put(as_json(record), out, overwrite)
         if json:
             put(as_json(record), None)
         elif status == "ok" and found is not None:
-            put("\n".join(text_lines(found, survey)), None)
+            more = [] if assessment is None else [assessment.sentence()]
+            put("\n".join([*text_lines(found, survey), *more]), None)
         talk.say(f"seed {used}")
         if status != "ok":
             talk.say(f"cannot tell ({status}): {reason}")

@@ -127,6 +127,8 @@ _DECLARED = (
            otherwise="0.15 mean spacings"),
     Option("--bootstrap", "Patterns simulated for the 95 % intervals: 0 for no intervals, or at least 39.",
            default=199, kind=click.IntRange(min=0), metavar="COUNT"),
+    Option("--assess", "Test whether the fitted model reproduces the distances to the next point, on which "
+                       "it was not fitted."),
     Option("--fit", "Fit to take over, written by `geoclust fit --out` or `geoclust analyse` "
                     "(fit.json).", kind=_PATH,
            metavar="FILE", otherwise="a fit is made now"),

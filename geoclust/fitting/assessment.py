@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING
 
 import numpy as np
 import numpy.typing as npt
@@ -22,6 +23,9 @@ from geoclust.intensity.base import Intensity
 from geoclust.models.base import ClusterModel
 from geoclust.models.patterns import draw_pattern, simple_surroundings
 from geoclust.workers import in_order
+
+if TYPE_CHECKING:
+    import pandas as pd
 
 Floats = npt.NDArray[np.float64]
 Progress = Callable[[str, int, int], None]
@@ -121,6 +125,11 @@ class Assessment:
         at = f": there are {'; '.join(where)}" if where else ""
         return f"The fitted model does not reproduce the {what} ({p}){at}."
 
+    def frames(self) -> list[pd.DataFrame]:
+        """The functions as tables, named as those of the assessment."""
+        name = "assessment of the fit"
+        return [c.to_frame().assign(function=f"{c.function}, {name}") for c in self.curves.values()]
+
     def record(self) -> dict[str, object]:
         """The finding as plain values."""
         return {
@@ -184,7 +193,8 @@ def assess_fit(
     Refits are by minimum contrast, on the survey's own range of distances and with its
     bandwidth. If the fit itself is by another method, such as the posterior, the survey is
     refitted in the same way for the test, which is then about the family of models rather
-    than about the estimate: a full posterior fit of every pattern would take hours.
+    than about the estimate: a full posterior fit of every pattern would take hours. Points that
+    belong to no cluster are not part of that family.
 
     With the default this is 400 refits and 16,000 simulated patterns: about a minute on two cores
     for 500 points.

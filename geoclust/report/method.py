@@ -174,6 +174,8 @@ def steps(fit: ClusterFit | None, located: bool) -> list[Step]:
 
 
 REFERENCES: tuple[str, ...] = (
+    "Baddeley A, Hardegen A, Lawrence T, Milne RK, Nair G, Rakshit S (2017) On two-stage Monte Carlo tests "
+    "of composite hypotheses. Computational Statistics and Data Analysis 114: 75–87",
     "Besag J (1977) Discussion of Ripley. Journal of the Royal Statistical Society B 39: 193–195",
     "Binder DA (1978) Bayesian cluster analysis. Biometrika 65: 31–38",
     "Dahl DB (2006) Model-based clustering for expression data via a Dirichlet process mixture model. In: "

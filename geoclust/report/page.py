@@ -14,7 +14,7 @@ from markupsafe import Markup, escape
 from geoclust.errors import OutputError
 from geoclust.fitting.pair_likelihoods import LikelihoodSurface
 from geoclust.layers.audit import area_text
-from geoclust.report import answer, canvas, effects, figures, maps, method, tables, words
+from geoclust.report import answer, canvas, effects, figures, fit_check, maps, method, tables, words
 
 if TYPE_CHECKING:
     from matplotlib.figure import Figure
@@ -22,6 +22,7 @@ if TYPE_CHECKING:
     from geoclust.area.survey import Survey
     from geoclust.centres.result import CentreMap
     from geoclust.curves.envelopes import EnvelopeTest
+    from geoclust.fitting.assessment import Assessment
     from geoclust.fitting.result import ClusterFit
     from geoclust.intensity.loglinear import LogLinearIntensity
     from geoclust.layers.audit import Audit
@@ -69,6 +70,7 @@ def write_page(
     files: Sequence[tuple[str, str]],
     terrain: tuple[LogLinearIntensity, Mapping[str, EnvelopeTest]] | None = None,
     notes: Sequence[str] = (),
+    assessment: Assessment | None = None,
 ) -> None:
     """Write the page.
 
@@ -94,6 +96,8 @@ def write_page(
         Intensity on covariates, and the tests beyond it.
     notes
         Sentences that a reader must know before using the results.
+    assessment
+        Whether the fitted model reproduces the survey.
 
     Raises
     ------
@@ -105,22 +109,27 @@ def write_page(
     pictures = _Pictures()
     taken = method.steps(fit, shown is not None)
     unused = [] if shown is not None else ["clusters"]
+    told = answer.compose(
+        survey=survey, envelopes=envelopes, fit=fit, status=status, reason=reason, centres=shown
+    )
+    if assessment is not None:
+        taken.append(fit_check.STEP)
+        told.sentences.append((fit_check.QUESTION, assessment.sentence()))
     text = _environment().get_template("page.html").render(
         title=title,
         ok=ok,
-        answer=answer.compose(
-            survey=survey, envelopes=envelopes, fit=fit, status=status, reason=reason, centres=shown
-        ),
+        answer=told,
         facts=_facts(survey, audit),
         maps=_maps(pictures, survey, shown),
-        charts=_charts(pictures, envelopes, fit, ok, shown, terrain),
+        charts=_charts(pictures, envelopes, fit, ok, shown, terrain) + _checked(pictures, assessment),
         effects=None if terrain is None else effects.effect_table(terrain[0]),
         beyond=None if terrain is None else effects.reading(terrain[1]),
         uncovered=[] if terrain is None else terrain[0].notes(),
         parameters=tables.parameter_table(fit, survey, shown) if fit is not None else None,
         zones=_polygon_table(shown, "zones", "zone"),
         unsurveyed=_polygon_table(shown, "unsurveyed", "part"),
-        diagnostics=_diagnostics(envelopes, fit, shown),
+        diagnostics=_diagnostics(envelopes, fit, shown)
+        + ([] if assessment is None else fit_check.rows(assessment)),
         choices=tables.choice_rows(choices),
         fit_choices=tables.choice_rows(fit.choices) if fit is not None else [],
         steps=taken,
@@ -330,6 +339,12 @@ def _charts(
                 )
             )
     return found
+
+
+def _checked(pictures: _Pictures, assessment: Assessment | None) -> list[Picture]:
+    if assessment is None:
+        return []
+    return [pictures.take(fit_check.figure(assessment), *fit_check.texts(assessment))]
 
 
 def _polygon_table(centres: CentreMap | None, which: str, heading: str) -> tables.Table | None:

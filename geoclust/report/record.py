@@ -14,6 +14,7 @@ import numpy as np
 from geoclust.centres.result import CentreMap
 from geoclust.curves.envelopes import EnvelopeTest
 from geoclust.errors import OutputError
+from geoclust.fitting.assessment import Assessment
 from geoclust.fitting.result import ClusterFit
 from geoclust.intensity.loglinear import LogLinearIntensity
 from geoclust.layers.audit import Audit
@@ -121,6 +122,11 @@ def add_terrain(
     record["intensity"] = plain(intensity.record())
     for name, test in envelopes.items():
         record["tests"][f"fitted intensity, {name}"] = plain(_test(test))
+
+
+def add_assessment(record: dict[str, Any], found: Assessment) -> None:
+    """Add whether the fitted model reproduces the survey to the content of fit.json."""
+    record["assessment"] = plain(found.record())
 
 
 def _test(test: EnvelopeTest) -> dict[str, object]:
