@@ -30,18 +30,15 @@ is below 1e-7. Coincident points have no distance and are left out.
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
 import numpy.typing as npt
 from scipy.interpolate import CubicSpline
-from scipy.optimize import minimize
 
 from geoclust.area._disc import disc_many
 from geoclust.area.study_area import StudyArea, portions
 from geoclust.curves.pair_sums import pair_sums
-from geoclust.fitting.contrast import STARTS, SURFACE, _valleys
 from geoclust.models.base import ClusterModel
 from geoclust.workers import in_order
 
@@ -207,154 +204,3 @@ def seen_areas(local_xy: Floats, area: StudyArea, radii: Floats, workers: int | 
         shares[k + 1] += total
     spline = CubicSpline(np.sqrt(np.concatenate([[0.0], knots])), shares)
     return np.asarray(np.pi * radii**2 * spline(np.sqrt(radii)))
-
-
-@dataclass(frozen=True, eq=False)
-class Search:
-    """Positive parameters to search over, in logarithms.
-
-    Attributes
-    ----------
-    names
-        Of the parameters.
-    low, high
-        (p,) limits of their logarithms.
-    model_at
-        The model of a vector of logarithms.
-    """
-
-    names: tuple[str, ...]
-    low: Floats
-    high: Floats
-    model_at: Callable[[Floats], ClusterModel]
-
-    def best(self, likelihood: PairLikelihood, starts: list[Floats]) -> tuple[Floats, float]:
-        """Logarithms with the highest log-likelihood that is found from any of the starts.
-
-        The starts are followed on coarser classes, the best end then on all of them.
-        """
-        coarser = likelihood.coarser()
-        ends = [self._climb(coarser, start, 1e-3) for start in starts]
-        theta, _ = max(ends, key=lambda end: end[1])
-        return self._climb(likelihood, theta, 1e-6)
-
-    def _climb(self, likelihood: PairLikelihood, start: Floats, tolerance: float) -> tuple[Floats, float]:
-        def lost(theta: Floats) -> float:
-            return -likelihood.of_model(self.model_at(theta))
-
-        # a simplex as wide as the steps of the surface; without derivatives, so that kinks do no harm
-        step = np.where(start + 0.1 < self.high, 0.1, -0.1)
-        simplex = np.vstack([start, start + np.diag(step)])
-        found = minimize(
-            lost, start, method="Nelder-Mead", bounds=list(zip(self.low, self.high, strict=True)),
-            options={"xatol": tolerance, "fatol": 1e-7, "initial_simplex": simplex},
-        )  # fmt: skip
-        return np.asarray(found.x), -float(found.fun)
-
-    def on_bound(self, theta: Floats, near: float = 1e-3) -> tuple[str, ...]:
-        """Names of the parameters that lie on a limit."""
-        at = (theta - self.low < near) | (self.high - theta < near)
-        return tuple(name for name, there in zip(self.names, at, strict=True) if there)
-
-    @property
-    def bounds(self) -> dict[str, tuple[float, float]]:
-        """Limits of each parameter."""
-        return {
-            n: (float(np.exp(a)), float(np.exp(b)))
-            for n, a, b in zip(self.names, self.low, self.high, strict=True)
-        }
-
-
-def search_over(
-    kind: type[ClusterModel], intensity: float, area: float, narrowest: float, r_max: float
-) -> Search:
-    """Parent intensity and scale, from a tenth of a centre in the study area to ten centres a point."""
-
-    def model_at(theta: Floats) -> ClusterModel:
-        rho, scale = np.exp(theta)
-        return kind.of(rho, scale, intensity / rho)
-
-    low = np.log([0.1 / area, narrowest])
-    high = np.log([10.0 * intensity, 2.0 * r_max])
-    return Search(("parent_intensity", kind.scale_name), low, high, model_at)
-
-
-def likelihood_surface(likelihood: PairLikelihood, search: Search) -> tuple[Floats, Floats, Floats]:
-    """Logarithms of parent intensity (a,) and scale (b,), and the log-likelihood over both (a, b)."""
-    rhos, scales = (np.linspace(search.low[k], search.high[k], SURFACE[k]) for k in range(2))
-    grid = np.empty(SURFACE)
-    for b, scale in enumerate(scales):
-        model = search.model_at(np.array([rhos[0], scale]))
-        siblings = model.sibling_density(likelihood.distances) / np.exp(rhos)[:, None]
-        excess = np.sum(model.sibling_density(likelihood.nodes) * likelihood.expected) / np.exp(rhos)
-        grid[:, b] = likelihood.value(1.0 + siblings, excess)
-    return rhos, scales, grid
-
-
-@dataclass(frozen=True, eq=False)
-class LikelihoodFit:
-    """Result of one maximisation.
-
-    Attributes
-    ----------
-    model
-        The fitted model.
-    value
-        Log-likelihood over that of complete randomness.
-    bounds
-        Lower and upper bound of each searched parameter.
-    on_bound
-        Names of parameters that ended on a bound.
-    surface
-        What is lost over parent intensity and scale.
-    likelihood
-        The pairs that it was fitted to.
-    """
-
-    model: ClusterModel
-    value: float
-    bounds: dict[str, tuple[float, float]]
-    on_bound: tuple[str, ...]
-    surface: LikelihoodSurface
-    likelihood: PairLikelihood
-
-
-def fit_likelihood(
-    kind: type[ClusterModel], likelihood: PairLikelihood, intensity: float, area: float, narrowest: float
-) -> LikelihoodFit:
-    """Fit a model by maximising a likelihood of pairs.
-
-    The surface over parent intensity and scale is computed first; every local maximum of
-    it, at most six, is the start of a search in logarithms.
-
-    Parameters
-    ----------
-    kind
-        A model class.
-    likelihood
-        The pairs.
-    intensity
-        Points per square metre; mean offspring follows from it.
-    area
-        Area of the study area, m², which bounds the parent intensity.
-    narrowest
-        Smallest scale searched, metres; the largest is twice the largest distance.
-    """
-    search = search_over(kind, intensity, area, narrowest, likelihood.r_max)
-    rhos, scales, grid = likelihood_surface(likelihood.coarser(), search)
-    starts = [np.array([rhos[a], scales[b]]) for a, b in _valleys(-grid)[:STARTS]]
-    theta, value = search.best(likelihood, starts)
-    loss = np.maximum(value - grid, 0.0)
-    surface = LikelihoodSurface(np.exp(rhos), np.exp(scales), kind.scale_name, loss)
-    return LikelihoodFit(
-        search.model_at(theta), value, search.bounds, search.on_bound(theta), surface, likelihood
-    )
-
-
-def rough_scale(
-    kind: type[ClusterModel], likelihood: PairLikelihood, intensity: float, area: float, narrowest: float
-) -> float:
-    """Scale at the highest node of the surface, metres: enough to choose the range by."""
-    search = search_over(kind, intensity, area, narrowest, likelihood.r_max)
-    _, scales, grid = likelihood_surface(likelihood.coarser(), search)
-    return float(np.exp(scales[np.unravel_index(np.argmax(grid), grid.shape)[1]]))

@@ -55,8 +55,8 @@ def summary(table: pd.DataFrame) -> list[str]:
         inside = int(((low <= truth) & (truth <= high)).sum())
         lines.append(
             f"| {name} | {truth * factor:g}{unit} | {table[name].median() * factor:.3f} "
-            f"| {shares_within(inside, len(table))} | {int((high < truth).sum())} | {int((low > truth).sum())} "
-            f"| {np.median(high / low):.2f} |"
+            f"| {shares_within(inside, len(table))} | {int((high < truth).sum())} "
+            f"| {int((low > truth).sum())} | {np.median(high / low):.2f} |"
         )
     return [*lines, ""]
 

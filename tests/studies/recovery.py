@@ -2,7 +2,8 @@
 
 Surveys of a Thomas process in the sample reserve (rho = 1 per hectare, sigma =
 15 m, mu = 6) are fitted by minimum contrast on g and on K with the default
-choices, some of them with a bootstrap interval. Run it again to go on where it stopped:
+choices, some of them with a bootstrap interval, and by Palm and composite likelihood.
+Run it again to go on where it stopped:
 
     python tests/studies/recovery.py --surveys 100 --with-interval 40 --bootstrap 59
 """
@@ -20,6 +21,7 @@ sys.path.insert(0, str(HERE.parent))
 from known_areas import sample_reserve
 
 import geoclust as gc
+from geoclust.fitting.likelihood_fits import FORMS, fit_pairs
 from geoclust.fitting.moments import ContrastChoices, fit_points
 from geoclust.models.patterns import draw_pattern
 
@@ -33,8 +35,13 @@ def survey_of(number: int, area: gc.StudyArea) -> tuple[gc.Survey, np.random.Gen
 
 
 def estimates(number: int, area: gc.StudyArea, function: str) -> dict[str, float]:
-    """Simulate, fit, and tell what came out."""
+    """Simulate, fit on a curve or by a likelihood of pairs, and tell what came out."""
     survey, _ = survey_of(number, area)
+    if function in FORMS:
+        fit = fit_pairs(gc.Thomas, function, survey.local_xy, area, ContrastChoices())
+        found_on_bound = int(bool(fit.on_bound))
+        row: dict[str, float] = {"points": survey.n, "r_max_m": fit.likelihood.r_max}
+        return {**row, "on_bound": found_on_bound, **fit.model.parameters}
     found = fit_points(gc.Thomas, survey.local_xy, area, ContrastChoices(function))
     on_bound = int(bool(found.fit.on_bound))
     return {"points": survey.n, "r_max_m": found.r_max, "on_bound": on_bound, **found.fit.model.parameters}
@@ -50,10 +57,11 @@ def intervals(number: int, area: gc.StudyArea, function: str, bootstrap: int) ->
     return row
 
 
-def summary(table: pd.DataFrame, covered: pd.DataFrame, function: str, bootstrap: int) -> list[str]:
-    """Lines of the results page for one function."""
+def summary(table: pd.DataFrame, covered: pd.DataFrame | None, function: str, bootstrap: int) -> list[str]:
+    """Lines of the results page for one function or likelihood."""
+    heading = function.capitalize().replace("-", " ") if function in FORMS else f"Contrast on {function}"
     lines = [
-        f"## Contrast on {function}, {len(table)} surveys, {int(table['on_bound'].sum())} on a bound",
+        f"## {heading}, {len(table)} surveys, {int(table['on_bound'].sum())} on a bound",
         "",
         "| parameter | truth | median | median / truth | middle 90 % | rms of log(estimate / truth) |",
         "|---|---|---|---|---|---|",
@@ -68,6 +76,8 @@ def summary(table: pd.DataFrame, covered: pd.DataFrame, function: str, bootstrap
             f"| {name} | {truth * factor:g}{unit} | {median:.3f} | {median / truth / factor:.3f} "
             f"| {low:.3f} to {high:.3f} | {spread:.3f} |"
         )
+    if covered is None:
+        return [*lines, ""]
     lines += [
         "",
         f"95 % bootstrap interval ({bootstrap} patterns) of {len(covered)} of these surveys, "
@@ -83,6 +93,29 @@ def summary(table: pd.DataFrame, covered: pd.DataFrame, function: str, bootstrap
     return [*lines, ""]
 
 
+def comparison(tables: dict[str, pd.DataFrame]) -> list[str]:
+    """Errors of all ways of fitting over the same surveys, in units of those of the contrast on g."""
+    names = list(TRUTH.parameters)
+    common = set.intersection(*(set(t["survey"]) for t in tables.values()))
+    lines = [
+        f"## Compared over the same {len(common)} surveys",
+        "",
+        "Root mean square of log(estimate / truth), and in units of that of the contrast on g:",
+        "",
+        "| fit | " + " | ".join(names) + " |",
+        "|---|" + "---|" * len(names),
+    ]
+    errors = {}
+    for function, table in tables.items():
+        kept = table[table["survey"].isin(common)]
+        errors[function] = [
+            float(np.sqrt(np.mean(np.log(kept[n] / t) ** 2))) for n, t in TRUTH.parameters.items()
+        ]
+        cells = [f"{e:.3f} ({e / g:.2f})" for e, g in zip(errors[function], errors["g"], strict=True)]
+        lines.append(f"| {function} | " + " | ".join(cells) + " |")
+    return [*lines, ""]
+
+
 def main() -> None:
     options = argparse.ArgumentParser(description=__doc__)
     options.add_argument("--surveys", type=int, default=100)
@@ -93,21 +126,27 @@ def main() -> None:
     folder = HERE / "results"
     page = ["# Recovery of known parameters", "", machine(), ""]
     page += [
-        "Thomas process in the sample reserve, rho = 1 ha⁻¹, sigma = 15 m, mu = 6; minimum contrast with",
+        "Thomas process in the sample reserve, rho = 1 ha⁻¹, sigma = 15 m, mu = 6; all fits with",
         "the default choices (`tests/studies/recovery.py`).",
         "",
     ]
-    for function in ("g", "K"):
+    tables = {}
+    for function in ("g", "K", *FORMS):
         table = run_missing(
             folder / f"recovery_{function}.csv", range(given.surveys),
             lambda k, f=function: estimates(k, area, f), f"recovery on {function}",
         )  # fmt: skip
-        covered = run_missing(
-            folder / f"recovery_interval_{function}.csv", range(given.with_interval),
-            lambda k, f=function: intervals(k, area, f, given.bootstrap), f"interval on {function}",
-        )  # fmt: skip
+        tables[function] = table
+        covered = None
+        if function not in FORMS:
+            covered = run_missing(
+                folder / f"recovery_interval_{function}.csv", range(given.with_interval),
+                lambda k, f=function: intervals(k, area, f, given.bootstrap), f"interval on {function}",
+            )  # fmt: skip
         page += summary(table, covered, function, given.bootstrap)
         (folder / "recovery.md").write_text("\n".join(page), encoding="utf-8")
+    page += comparison(tables)
+    (folder / "recovery.md").write_text("\n".join(page), encoding="utf-8")
     print("\n".join(page))
 
 
