@@ -16,7 +16,7 @@ Floats = npt.NDArray[np.float64]
 # Vehtari et al. 2021, Bayesian Analysis 16: 667-718: rank-normalised R-hat and effective sample size
 R_HAT_LIMIT = 1.01
 ENOUGH = 400.0
-# draws kept per chain; longer runs are thinned to this, so memory stays bounded
+# draws kept per chain, at most; longer runs are thinned, so memory stays bounded
 KEPT = 500
 FIRST = 250
 # kernels evaluated in all before patience ends: a few minutes on two cores. Counted, not timed, so
@@ -75,7 +75,7 @@ def sample_until_converged(
     rng: np.random.Generator,
     chains: int = 4,
     every: int = 50,
-    most_rounds: int = 6,
+    most_rounds: int = 11,
     enough: float = ENOUGH,
     workers: int | None = None,
     progress: Progress | None = None,
@@ -93,8 +93,8 @@ def sample_until_converged(
     every
         Moves of centres between two walks of scale and background.
     most_rounds
-        Each round after the first is as long as all before it together; fewer are made where
-        every move meets very many points.
+        Each round after the first makes the run longer by half; fewer are made where every move meets
+        very many points.
     enough
         Effective sample size to reach for every quantity.
     """
@@ -110,9 +110,9 @@ def sample_until_converged(
     in_reach = np.pi * (setup.reach * setup.start.scale) ** 2 * setup.n / setup.area.area
     a_move = 1.0 + min(in_reach, setup.n)
     for k in range(1, most_rounds):
-        more = len(running[0].records)
+        more = len(running[0].records) // 2
         after = chains * (moves + more * moves_per_draw) * a_move
-        if sample.converged or (k > 1 and after > PATIENCE):
+        if sample.converged or (k > 2 and after > PATIENCE):
             break
         extend(
             running, draws=more, moves_per_draw=moves_per_draw, every=every, workers=workers,

@@ -27,7 +27,7 @@ from geoclust.models.base import ClusterModel
 Progress = Callable[[str, int, int], None]
 
 # the table of shares, and with it the prior, first spans this factor on both sides of the pilot's scale
-TABLE_FACTOR = 2.5
+TABLE_FACTOR = 1.8
 # worse than this after all rounds is no answer
 HOPELESS_R_HAT, HOPELESS_SIZE = 1.1, 50.0
 
@@ -103,7 +103,7 @@ def sample_posterior(
     *,
     chains: int = 4,
     enough: float = ENOUGH,
-    most_rounds: int = 7,
+    most_rounds: int = 12,
     rng: np.random.Generator,
     workers: int | None = None,
     progress: Progress | None = None,

@@ -268,7 +268,7 @@ def test_every_draw_is_a_possible_state():
 
 @pytest.mark.parametrize("scales", [(15.0, 15.0), (12.0, 36.0)], ids=["one scale", "range of scales"])
 def test_share_table_in_the_ragged_reserve(scales):
-    """Interpolated shares are within 1e-4 of the exact Gaussian share, in and around 900 m of the reserve.
+    """Interpolated shares are within 3e-4 of the exact Gaussian share, in and around 900 m of the reserve.
 
     1,500 places uniform in the widened area and 1,500 near the boundary.
     """
@@ -288,5 +288,6 @@ def test_share_table_in_the_ragged_reserve(scales):
     sigma = np.exp(rng.uniform(*np.log(scales), len(at))) if scales[0] < scales[1] else np.full(len(at), 15.0)
     exact = area.gaussian_shares(at, sigma)
     found = [share_at(table, x, y, s) for (x, y), s in zip(at - area.origin, sigma, strict=True)]
-    assert np.max(np.abs(found - exact)) < 1e-4
+    assert np.max(np.abs(found - exact)) < 3e-4
+    assert np.sqrt(np.mean((found - exact) ** 2)) < 1e-4
     assert np.mean((exact > 0.01) & (exact < 0.99)) > 0.2
