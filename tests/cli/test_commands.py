@@ -9,6 +9,7 @@ import signal
 import subprocess
 import sys
 import time
+from functools import partial
 from pathlib import Path
 
 import geopandas as gpd
@@ -19,6 +20,7 @@ import rasterio
 
 from geoclust.cli.entry import INTERRUPTED, run
 from geoclust.cli.talk import Talk
+from geoclust.fitting import assessment
 
 LAYERS = ["--points-layer", "mounds", "--area-layer", "reserve"]
 
@@ -94,6 +96,20 @@ def test_fit_prints_parameters_with_units(survey_file, fit_file, capsys):
     # the pattern was drawn with 6 m
     assert 4 < sigma < 9
     assert f"{sigma:.2f}" in text
+
+
+def test_fit_is_assessed(survey_file, monkeypatch, capsys):
+    """The sentence and the record of the same test, on a pattern that the model was drawn from."""
+    few = partial(assessment.assess_fit, simulations=19, first_stage=19)
+    monkeypatch.setattr(assessment, "assess_fit", few)
+    quick = ["--method", "minimum-contrast", "--bootstrap", "0", "--seed", "1", "--quiet", "--assess"]
+    assert run(["fit", *both(survey_file), *quick]) == 0
+    last = capsys.readouterr().out.splitlines()[-1]
+    assert run(["fit", *both(survey_file), *quick, "--json"]) == 0
+    record = json.loads(capsys.readouterr().out)["assessment"]
+    assert record["sentence"] == last
+    assert last.startswith("The fitted model reproduces the distances from points to the next point (p = ")
+    assert record["p_value"] > 0.05
 
 
 def test_random_points_end_in_cannot_tell(survey_file, tmp_path, capsys):

@@ -82,6 +82,9 @@ def test_files_of_the_contract(results):
     assert any(n.endswith(".sld") for n in names)
     curves = pd.read_csv(results / "curves.csv")
     assert list(curves.columns) == ["function", "r_m", "estimate", "theory", "lower", "upper"]
+    judged = curves[curves["function"] == "G, assessment of the fit"].dropna()
+    assert (judged["lower"] <= judged["upper"]).all()
+    assert len(judged) > 10
     page = (results / "report.html").read_text("utf-8")
     assert "<html" in page
     assert 'src="http' not in page
@@ -92,6 +95,8 @@ def test_record_follows_its_schema(results, survey_file):
     record = valid_record(results)
     assert record["status"] == "ok"
     assert record["seed"] == 7
+    assert record["assessment"]["simulations"] == 19
+    assert 0.05 <= record["assessment"]["p_value"] <= 1
     sigma = record["parameters"]["sigma"]
     assert sigma["lower_95"] < sigma["value"] < sigma["upper_95"]
     assert sigma["value"] == pytest.approx(6.0, rel=0.3)
