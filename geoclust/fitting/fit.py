@@ -8,7 +8,7 @@ from dataclasses import replace
 import numpy as np
 
 from geoclust.area.survey import Survey
-from geoclust.errors import UsageError, not_allowed
+from geoclust.errors import not_allowed
 from geoclust.fitting.likelihood_fits import FORMS, fit_by_likelihood
 from geoclust.fitting.moments import ContrastChoices, fit_by_contrast
 from geoclust.fitting.posterior import fit_by_posterior
@@ -105,15 +105,11 @@ def fit_clusters(
         )  # fmt: skip
         return replace(sampled, seed=rng if isinstance(rng, int) else None, intensity=intensity)
     if method in FORMS:
-        if intensity is not None:
-            raise UsageError(
-                f"{method} takes no intensity; use one of the methods that do: posterior, minimum-contrast."
-            )
         paired = fit_by_likelihood(
             survey, kind, method, choices=choices, bootstrap=bootstrap, rng=np.random.default_rng(rng),
-            workers=workers, progress=progress,
+            workers=workers, progress=progress, intensity=intensity,
         )  # fmt: skip
-        return replace(paired, seed=rng if isinstance(rng, int) else None)
+        return replace(paired, seed=rng if isinstance(rng, int) else None, intensity=intensity)
     found = fit_by_contrast(
         survey, kind, choices=choices, bootstrap=bootstrap, rng=np.random.default_rng(rng),
         workers=workers, progress=progress, intensity=intensity,

@@ -40,6 +40,7 @@ def fit_pairs(
     area: StudyArea,
     choices: ContrastChoices,
     workers: int | None = 1,
+    along: Intensity | None = None,
 ) -> LikelihoodFit:
     """Fit a model to points in local coordinates; the range follows the clusters unless it is set.
 
@@ -57,6 +58,8 @@ def fit_pairs(
         Of which `r_min` and `r_max` count.
     workers
         Threads; the answer does not depend on it.
+    along
+        Intensity fitted to the points, or None if it is constant.
 
     Raises
     ------
@@ -75,7 +78,7 @@ def fit_pairs(
     width = default_bandwidth(intensity)
 
     r_max = widest if choices.r_max is None else choices.r_max
-    pairs = PairLikelihood.of_points(form, local_xy, area, r_min, r_max, max(widest, r_max), workers)
+    pairs = PairLikelihood.of_points(form, local_xy, area, r_min, r_max, max(widest, r_max), workers, along)
     fixed = (intensity, area.area, width / NARROWEST)
     if choices.r_max is None:
         shorter = RANGE_IN_SCALES[form] * rough_spread(kind, pairs, *fixed)
@@ -109,11 +112,11 @@ def fit_by_likelihood(
     if survey.n < verdicts.FEWEST_POINTS:
         reason = verdicts.sentence("too-few-points", n=survey.n, fewest=verdicts.FEWEST_POINTS)
         raise CannotTell("too-few-points", reason)
-    found = fit_pairs(kind, form, survey.local_xy, survey.area, choices, workers)
+    found = fit_pairs(kind, form, survey.local_xy, survey.area, choices, workers, intensity)
     p_value = clustering_p_value(survey, found.likelihood.r_max, test_seed, workers, progress, intensity)
 
     def fit_again(points: Floats, again: Intensity | None) -> ClusterModel:
-        return fit_pairs(kind, form, points, survey.area, choices).model
+        return fit_pairs(kind, form, points, survey.area, choices, along=again).model
 
     draws = bootstrap_draws(
         found.model, survey.area, fit_again, bootstrap, boot_seed, workers=workers, progress=progress,

@@ -20,6 +20,11 @@ the product of the densities of single pairs, given that they are less than R ap
 
 with c the set covariance of the study area, averaged over directions, exact.
 
+Where the intensity varies, ln(intensity(y) g) and the integral of intensity(y) g(|x - y|) over
+the places y of the study area take their place in the first, and ln(intensity(x) intensity(y) g)
+and the double integral of that product in the second (Prokešová, Dvořák & Jensen 2017, Annals of
+the Institute of Statistical Mathematics 69: 513-542). See `weighed_areas`.
+
 Values are told relative to complete randomness (g = 1), which takes the constants away.
 
 Distances are put into 4,096 classes, narrow at zero: limits at R (k/4096)². The mean distance of
@@ -39,6 +44,8 @@ from scipy.interpolate import CubicSpline
 from geoclust.area._disc import disc_many
 from geoclust.area.study_area import StudyArea, portions
 from geoclust.curves.pair_sums import pair_sums
+from geoclust.fitting.weighed_areas import mean_of_products, mean_round_points
+from geoclust.intensity.base import Intensity
 from geoclust.models.base import ClusterModel
 from geoclust.workers import in_order
 
@@ -147,10 +154,12 @@ class PairLikelihood:
         r_max: float,
         widest: float,
         workers: int | None = 1,
+        intensity: Intensity | None = None,
     ) -> PairLikelihood:
         """Sort the pairs between `r_min` and `r_max` by distance, and integrate over the study area.
 
-        `widest` is the largest distance that other patterns in this study area may ask for.
+        `widest` is the largest distance that other patterns in this study area may ask for;
+        `intensity` was fitted to the points, or is None if it is constant.
         """
         limits = class_limits(r_min, r_max)
         moments = pair_sums(local_xy, area, limits, edge_weight="unweighted", workers=workers).moments[1:]
@@ -160,12 +169,19 @@ class PairLikelihood:
         nodes = (2.0 / 3.0) * np.diff(limits**3) / np.diff(limits**2)
         if form == PALM:
             seen = seen_areas(local_xy, area, limits, workers)
-            expected = len(local_xy) / area.area * np.diff(seen)
+            if intensity is None:
+                seen *= len(local_xy) / area.area
+            else:
+                seen *= mean_round_points(intensity, local_xy, limits)
+            expected = np.diff(seen)
         else:
             table = area.shift_table(widest, isotropic=True, workers=workers)
             rows = np.arange(len(table.values))
             covariance = area.area * np.interp(nodes * table.row_scale, rows, table.values[:, 0])
             expected = covariance * np.pi * np.diff(limits**2)
+            if intensity is not None:
+                below = np.pi * limits[0] ** 2 * area.area + np.concatenate([[0.0], np.cumsum(expected)])
+                expected = np.diff(below * mean_of_products(intensity, limits))
         return cls(form, moments[full, 2] / counts, counts, nodes, expected, limits)
 
 
