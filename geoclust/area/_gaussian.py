@@ -37,7 +37,7 @@ def entire(d2, sigma):
 
 
 @njit(nogil=True, cache=True)
-def piece_deficit(ax, ay, bx, by, sigma):
+def piece_deficit(ax, ay, bx, by, sigma, reach):
     """Mass of the wedge under one piece that lies beyond it, in turns (coordinates from the centre)."""
     ux, uy = bx - ax, by - ay
     length = np.sqrt(ux * ux + uy * uy)
@@ -54,7 +54,6 @@ def piece_deficit(ax, ay, bx, by, sigma):
         h = ax * uy - ay * ux
         ta = ax * ux + ay * uy
         tb = ta + length
-    reach = REACH * sigma
     if abs(h) >= reach:
         return 0.0
     span = np.sqrt(reach * reach - h * h)
@@ -82,9 +81,14 @@ def piece_deficit(ax, ay, bx, by, sigma):
 
 
 @njit(nogil=True, cache=True)
-def gaussian_share(grid, cx, cy, sigma):
-    """Mass in W of the Gaussian with standard deviation `sigma` per axis round (cx, cy)."""
-    reach = REACH * sigma + 0.5 * grid.cell
+def gaussian_share(grid, cx, cy, sigma, cut):
+    """Mass in W of the Gaussian with standard deviation `sigma` per axis round (cx, cy).
+
+    Nothing is looked at beyond `cut` sigmas: REACH of them leave nothing out, fewer
+    leave out at most exp(-cut²/2).
+    """
+    most = cut * sigma
+    reach = most + 0.5 * grid.cell
     i_low = max(int(np.floor((cx - reach - grid.left) / grid.cell)), 0)
     i_high = min(int(np.floor((cx + reach - grid.left) / grid.cell)), grid.columns - 1)
     j_low = max(int(np.floor((cy - reach - grid.bottom) / grid.cell)), 0)
@@ -104,7 +108,7 @@ def gaussian_share(grid, cx, cy, sigma):
                 ax, ay = grid.x0[k] - px, grid.y0[k] - py
                 if ax == 0.0 and ay == 0.0:
                     on_vertex = True
-                more = piece_deficit(ax, ay, grid.x1[k] - px, grid.y1[k] - py, sigma)
+                more = piece_deficit(ax, ay, grid.x1[k] - px, grid.y1[k] - py, sigma, most)
                 met = met or more != 0.0
                 deficit += more
         if not on_vertex:
@@ -128,6 +132,6 @@ def gaussian_share(grid, cx, cy, sigma):
 
 
 @njit(nogil=True, cache=True)
-def gaussian_many(grid, centres, sigma, out):
+def gaussian_many(grid, centres, sigma, cut, out):
     for k in range(centres.shape[0]):
-        out[k] = gaussian_share(grid, centres[k, 0], centres[k, 1], sigma[k])
+        out[k] = gaussian_share(grid, centres[k, 0], centres[k, 1], sigma[k], cut)

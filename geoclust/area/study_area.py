@@ -344,7 +344,7 @@ class StudyArea:
         grid = self.grid
 
         def work(part: slice) -> None:
-            _gaussian.gaussian_many(grid, at[part], s[part], out[part])
+            _gaussian.gaussian_many(grid, at[part], s[part], _gaussian.REACH, out[part])
 
         for _ in in_order(work, portions(len(at), 2_000), workers):
             pass
