@@ -5,7 +5,8 @@ from __future__ import annotations
 import numpy as np
 from numba import njit
 
-from geoclust.fitting._kernels import kernel_peak, kernel_shape
+from geoclust.fitting._disc_moves import try_radius
+from geoclust.fitting._kernels import DISC, kernel_peak, kernel_shape
 from geoclust.fitting._moves import (
     BACKGROUND,
     ETA,
@@ -99,42 +100,6 @@ def try_background(data, target, state, step, rng):
 
 
 @njit(nogil=True, cache=True)
-def run(data, target, table, state, work, steps, every, walk, mix, rng):
-    """Make `steps` moves of centres, and a walk of scale and background after `every` of them.
-
-    `mix` is the share of shifts, and that of splits and merges together.
-
-    Returns the moves made: fewer if the arrays for centres are full.
-    """
-    room = state.share.size
-    for step in range(steps):
-        if state.number[0] > room - 2:
-            return step
-        u = rng.random()
-        # half of what is not a shift or a split or merge is births, half deaths: reversible pairs
-        if u < mix[0]:
-            try_shift(data, target, table, state, work, rng)
-        elif u < mix[0] + 0.5 * mix[1]:
-            try_split(data, target, table, state, work, rng)
-        elif u < mix[0] + mix[1]:
-            try_merge(data, target, table, state, work, rng)
-        elif u < 0.5 * (1.0 + mix[0] + mix[1]):
-            try_birth(data, target, table, state, work, rng)
-        else:
-            try_death(data, target, state, work, rng)
-        if (step + 1) % every == 0:
-            if target.free_scale:
-                try_rescale(data, target, table, state, work, walk[0], rng)
-            if target.with_background:
-                try_background(data, target, state, walk[1], rng)
-    # take off the rounding that many small changes have left
-    state.scalars[EXPOSURE] = recompute(
-        data, target, state, state.scalars[SCALE], state.density, state.share, state.far, table
-    )
-    return steps
-
-
-@njit(nogil=True, cache=True)
 def draw_members(data, target, state, owner, weight, rng):
     """Draw the centre of every point given centres and scale; -1 is the background, or a centre outside D.
 
@@ -163,3 +128,42 @@ def draw_members(data, target, state, owner, weight, rng):
                     weight[k] += w
                     if rng.random() * weight[k] < w:
                         owner[k] = c
+
+
+@njit(nogil=True, cache=True)
+def run(data, target, table, state, work, steps, every, walk, mix, rng):
+    """Make `steps` moves of centres, and a walk of scale and background after `every` of them.
+
+    `mix` is the share of shifts, and that of splits and merges together.
+
+    Returns the moves made: fewer if the arrays for centres are full.
+    """
+    room = state.share.size
+    for step in range(steps):
+        if state.number[0] > room - 2:
+            return step
+        u = rng.random()
+        # half of what is not a shift or a split or merge is births, half deaths: reversible pairs
+        if u < mix[0]:
+            try_shift(data, target, table, state, work, rng)
+        elif u < mix[0] + 0.5 * mix[1]:
+            try_split(data, target, table, state, work, rng)
+        elif u < mix[0] + mix[1]:
+            try_merge(data, target, table, state, work, rng)
+        elif u < 0.5 * (1.0 + mix[0] + mix[1]):
+            try_birth(data, target, table, state, work, rng)
+        else:
+            try_death(data, target, state, work, rng)
+        if (step + 1) % every == 0:
+            if target.free_scale and target.kernel == DISC:
+                draw_members(data, target, state, work.owner, work.density, rng)
+                try_radius(data, target, table, state, work.owner, walk[0], rng)
+            elif target.free_scale:
+                try_rescale(data, target, table, state, work, walk[0], rng)
+            if target.with_background:
+                try_background(data, target, state, walk[1], rng)
+    # take off the rounding that many small changes have left
+    state.scalars[EXPOSURE] = recompute(
+        data, target, state, state.scalars[SCALE], state.density, state.share, state.far, table
+    )
+    return steps

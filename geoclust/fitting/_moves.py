@@ -80,6 +80,7 @@ class Work(NamedTuple):
     density: np.ndarray  # (n,) densities under another scale
     share: np.ndarray  # (room,) shares under another scale
     far: np.ndarray  # (n,) far density under another scale
+    owner: np.ndarray  # (n,) int32, memberships
 
 
 class State(NamedTuple):

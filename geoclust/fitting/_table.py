@@ -86,7 +86,9 @@ def blend_levels(table, scale, values, factor, out):
     t = (np.log(scale) - table.log_scale) / table.log_step
     base = min(max(int(np.floor(t)), 1), table.start.size - 3)
     w0, w1, w2, w3 = cubic(t - base)
-    out += factor * (w0 * values[base - 1] + w1 * values[base] + w2 * values[base + 1] + w3 * values[base + 2])
+    out += factor * (
+        w0 * values[base - 1] + w1 * values[base] + w2 * values[base + 1] + w3 * values[base + 2]
+    )
 
 
 @njit(nogil=True, cache=True)

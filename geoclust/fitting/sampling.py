@@ -173,7 +173,7 @@ class Chain:
         n, room = self.setup.n, len(self.state.share)
         self.work = _moves.Work(
             np.zeros(2, np.int64), np.zeros(4, np.int64), np.zeros(n), np.zeros(n), np.zeros(room),
-            np.zeros(n),
+            np.zeros(n), np.zeros(n, np.int32),
         )  # fmt: skip
 
     def _first_centres(self, expected: float) -> None:
