@@ -89,7 +89,7 @@ def fit_by_posterior(
         reason = verdicts.sentence("no-clustering", p_value=p_value, r_max=pilot.r_max)
         return _without_sample(kind, survey, pilot, facts, "no-clustering", reason)
     sample = sample_posterior(
-        survey.local_xy, survey.area, _starting_model(pilot, survey, priors), priors,
+        survey.local_xy, survey.area, starting_model(pilot, survey, priors), priors,
         chains=chains, rng=sample_seed, workers=workers, progress=progress, intensity=intensity,
     )  # fmt: skip
     return _with_sample(kind, survey, pilot, facts, sample)
@@ -161,7 +161,7 @@ def sample_posterior(
     return sample
 
 
-def _starting_model(pilot: MomentFit, survey: Survey, priors: Priors) -> ClusterModel:
+def starting_model(pilot: MomentFit, survey: Survey, priors: Priors) -> ClusterModel:
     """The pilot's model, kept away from the edges of what can be sampled."""
     model = pilot.fit.model
     low, high = priors.scale_bounds
