@@ -2,8 +2,9 @@
 
 The areas themselves are exact. What an intensity adds is a mean of it over them, which varies
 slowly with the distance; it is taken from a lattice of cells. As the same cells
-stand in the numerator and the denominator, the grain of the lattice cancels: the mean is off by
-less than a thousandth.
+stand in the numerator and the denominator, the grain of the lattice cancels: for an intensity that
+changes by e over 150 m in 20 ha the mean is off by 2 parts in 1,000 at the width of a cell (2 m), by
+4 in 10,000 beyond 30 m.
 """
 
 from __future__ import annotations
@@ -43,7 +44,8 @@ def mean_round_points(intensity: Intensity, local_xy: Floats, radii: Floats) -> 
     at = cells.find(local_xy + cells.area.origin)
     points = np.zeros(cells.shape)
     np.add.at(points, (cells.row[at], cells.column[at]), 1.0)
-    return _ratio(points, points, weighed, cover, cells.transform.a, radii)
+    here = float(np.mean(weighed[cells.row, cells.column][at] / cells.areas[at]))
+    return _ratio(points, points, weighed, cover, here, cells.transform.a, radii)
 
 
 def mean_of_products(intensity: Intensity, radii: Floats) -> Floats:
@@ -52,7 +54,8 @@ def mean_of_products(intensity: Intensity, radii: Floats) -> Floats:
     Parameters and result as for `mean_round_points`, in squares of points per square metre.
     """
     cells, cover, weighed = _lattice(intensity)
-    return _ratio(weighed, cover, weighed, cover, cells.transform.a, radii)
+    here = float(np.sum(weighed[cells.row, cells.column] ** 2 / cells.areas) / cells.areas.sum())
+    return _ratio(weighed, cover, weighed, cover, here, cells.transform.a, radii)
 
 
 def _lattice(intensity: Intensity) -> tuple[Cells, Floats, Floats]:
@@ -65,8 +68,13 @@ def _lattice(intensity: Intensity) -> tuple[Cells, Floats, Floats]:
     return cells, cover, weighed
 
 
-def _ratio(a: Floats, b: Floats, over_a: Floats, over_b: Floats, cell: float, radii: Floats) -> Floats:
-    """Sum over shifts up to each radius of the correlation of `a` and `over_a`, over that of the others."""
+def _ratio(
+    a: Floats, b: Floats, over_a: Floats, over_b: Floats, here: float, cell: float, radii: Floats
+) -> Floats:
+    """Correlation of `a` and `over_a` over that of `b` and `over_b`, both summed up to each radius.
+
+    `here` is its limit at radius zero.
+    """
     reach = int(np.ceil(radii[-1] / cell)) + 1
     shape = [fft.next_fast_len(n + reach, real=True) for n in a.shape]
     turned = {id(v): fft.rfft2(v, shape) for v in (a, b, over_a, over_b)}
@@ -78,7 +86,8 @@ def _ratio(a: Floats, b: Floats, over_a: Floats, over_b: Floats, cell: float, ra
     near = distance <= cell * reach
     ring = np.rint(distance[near] / cell).astype(int)
     sums = [np.cumsum(np.bincount(ring, weights=v[near])) for v in (above, below)]
-    # the sums up to a ring of shifts reach half a cell beyond it, but for the one without shift
+    # the sums up to a ring of shifts reach half a cell beyond it
     knots = cell * (np.arange(len(sums[0])) + 0.5)
-    knots[0] = 0.0
-    return np.asarray(PchipInterpolator(knots, sums[0] / sums[1])(np.minimum(radii, knots[-1])))
+    ratio = sums[0] / sums[1]
+    knots[0], ratio[0] = 0.0, here
+    return np.asarray(PchipInterpolator(knots, ratio)(np.minimum(radii, knots[-1])))
