@@ -73,6 +73,12 @@ def kernel_peak(kernel, scale):
     return 1.0 / (np.pi * scale * scale) if kernel == DISC else 1.0 / (2.0 * np.pi * scale * scale)
 
 
+@njit(nogil=True, cache=True, inline="always")
+def kernel_width(kernel, scale):
+    """What moves are measured by: the standard deviation per axis, or the scale of a kernel that has none."""
+    return 0.5 * scale if kernel == DISC else scale
+
+
 @njit(nogil=True, cache=True)
 def draw_offset(kernel, scale, rng):
     """Draw one offset from the kernel."""

@@ -29,7 +29,7 @@ import numpy as np
 from numba import njit
 
 from geoclust.area._edges import is_inside
-from geoclust.fitting._kernels import add_shapes, draw_offset, kernel_peak, kernel_shape
+from geoclust.fitting._kernels import add_shapes, draw_offset, kernel_peak, kernel_shape, kernel_width
 from geoclust.fitting._table import blend_levels, share_at
 
 
@@ -98,7 +98,7 @@ class State(NamedTuple):
 
 SCALE, ETA, EXPOSURE = 0, 1, 2
 BIRTH, DEATH, SHIFT, SPLIT, MERGE, RESCALE, BACKGROUND = 0, 1, 2, 3, 4, 5, 6
-# split offsets are drawn with this standard deviation in scales, and cut at three of them
+# split offsets are drawn with this standard deviation in kernel widths, and cut at three of them
 SPLIT_SD = 0.9
 SPLIT_CUT = 3.0
 
@@ -356,7 +356,7 @@ def try_shift(data, target, table, state, work, rng):
     scale = state.scalars[SCALE]
     c = int(rng.random() * number)
     # small steps for centres of many points, large ones for the others
-    size = scale * (0.35 if rng.random() < 0.5 else 1.0)
+    size = kernel_width(target.kernel, scale) * (0.35 if rng.random() < 0.5 else 1.0)
     x = state.centres[c, 0] + size * rng.standard_normal()
     y = state.centres[c, 1] + size * rng.standard_normal()
     if not is_inside(data.wide, x, y):
@@ -386,9 +386,8 @@ def partners(state, x, y, skip_a, skip_b, limit):
 
 
 @njit(nogil=True, cache=True)
-def split_density(dx, dy, scale):
+def split_density(dx, dy, sd):
     """Density of the half offset of a split, cut at SPLIT_CUT standard deviations."""
-    sd = SPLIT_SD * scale
     z = (dx * dx + dy * dy) / (sd * sd)
     mass = 1.0 - np.exp(-0.5 * SPLIT_CUT * SPLIT_CUT)
     return np.exp(-0.5 * z) / (2.0 * np.pi * sd * sd * mass)
@@ -401,7 +400,7 @@ def try_split(data, target, table, state, work, rng):
     if number == 0:
         return
     scale = state.scalars[SCALE]
-    sd = SPLIT_SD * scale
+    sd = SPLIT_SD * kernel_width(target.kernel, scale)
     a = int(rng.random() * number)
     while True:
         dx, dy = sd * rng.standard_normal(), sd * rng.standard_normal()
@@ -424,7 +423,7 @@ def try_split(data, target, table, state, work, rng):
     n_1 = partners(state, bx, by, a, -1, limit) + 1
     back = (1.0 / n_0 + 1.0 / n_1) / (number + 1)
     # offset and its opposite give the same pair; four is the Jacobian of (a, d) -> (a + d, a - d)
-    forth = 2.0 * split_density(dx, dy, scale) / number / 4.0
+    forth = 2.0 * split_density(dx, dy, sd) / number / 4.0
     log_a = change + prior_ratio(data, target, state, 1, exposure) + np.log(back / forth)
     if np.log(rng.random()) < log_a:
         take(data, state, work, exposure)
@@ -441,7 +440,7 @@ def try_merge(data, target, table, state, work, rng):
     if number < 2:
         return
     scale = state.scalars[SCALE]
-    sd = SPLIT_SD * scale
+    sd = SPLIT_SD * kernel_width(target.kernel, scale)
     limit = (2.0 * SPLIT_CUT * sd) ** 2
     a = int(rng.random() * number)
     ax, ay = state.centres[a, 0], state.centres[a, 1]
@@ -469,7 +468,7 @@ def try_merge(data, target, table, state, work, rng):
     exposure = state.scalars[EXPOSURE] - state.share[a] - state.share[b] + share
     n_b = partners(state, bx, by, b, -1, limit)
     forth = (1.0 / n_a + 1.0 / n_b) / number
-    back = 2.0 * split_density(0.5 * (ax - bx), 0.5 * (ay - by), scale) / (number - 1) / 4.0
+    back = 2.0 * split_density(0.5 * (ax - bx), 0.5 * (ay - by), sd) / (number - 1) / 4.0
     log_a = change + prior_ratio(data, target, state, -1, exposure) + np.log(back / forth)
     if np.log(rng.random()) < log_a:
         take(data, state, work, exposure)
