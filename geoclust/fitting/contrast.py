@@ -1,26 +1,26 @@
 """Minimum contrast: the model whose curve is nearest to the survey's.
 
 Diggle & Gratton (1984), Journal of the Royal Statistical Society B 46:
-193-227: minimise the integral of |T̂(r)^q - T(r; theta)^q|² over a range of r.
+193-227: minimise the integral of w(r) |T̂(r)^q - T(r; theta)^q|² over a range of r.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property
 
 import numpy as np
 import numpy.typing as npt
-from scipy.optimize import least_squares
 
 from geoclust.errors import not_allowed
-from geoclust.models.base import ClusterModel
+from geoclust.models.base import ClusterModel, sum_of_levels
 
 Floats = npt.NDArray[np.float64]
 
-FUNCTIONS = ("g", "K")
-# variance-stabilising powers: Diggle 1983 for K; for g the square root, by the same reasoning
-EXPONENTS = {"K": 0.25, "g": 0.5}
+FUNCTIONS = ("g", "K", "L")
+# variance-stabilising powers: Diggle 1983 for K; for g the square root, by the same reasoning; L has
+# about the same variance at all distances as it is (Besag 1977)
+EXPONENTS = {"K": 0.25, "g": 0.5, "L": 1.0}
 # nodes of the contrast surface in parent intensity and scale
 SURFACE = (61, 61)
 # valleys of the surface that are searched, the deepest first
@@ -54,6 +54,27 @@ class ContrastSurface:
 
 
 @dataclass(frozen=True, eq=False)
+class LevelSurface:
+    """The contrast over the two scales of a nested process, both intensities the best for each pair.
+
+    Attributes
+    ----------
+    outer_scales, inner_scales
+        (a,), (b,) metres, equal steps of the logarithm.
+    outer_name, inner_name
+        Names of the parameters, such as ``outer_sigma``.
+    contrast
+        (a, b) contrast at each pair; infinite where the outer scale is not the larger one.
+    """
+
+    outer_scales: Floats
+    inner_scales: Floats
+    outer_name: str
+    inner_name: str
+    contrast: Floats
+
+
+@dataclass(frozen=True, eq=False)
 class ContrastFit:
     """Result of one minimisation.
 
@@ -75,7 +96,7 @@ class ContrastFit:
     value: float
     bounds: dict[str, tuple[float, float]]
     on_bound: tuple[str, ...]
-    surface: ContrastSurface
+    surface: ContrastSurface | LevelSurface
 
 
 @dataclass(frozen=True, eq=False)
@@ -85,7 +106,7 @@ class Contrast:
     Attributes
     ----------
     function
-        ``g`` or ``K``.
+        ``g``, ``K`` or ``L``.
     radii
         (k,) metres, increasing.
     values
@@ -96,6 +117,8 @@ class Contrast:
         Half width of the kernel that g was estimated with, metres. The model's g
         is smoothed with the same kernel before the two are compared: clusters
         narrower than the kernel are blurred by it in the survey's curve as well.
+    distance_weight
+        Each squared difference counts its distance to this power; 0 for all alike.
     """
 
     function: str
@@ -103,36 +126,73 @@ class Contrast:
     values: Floats
     exponent: float
     bandwidth: float | None = None
+    distance_weight: float = 0.0
+
+    def up_to(self, r_max: float) -> Contrast:
+        """The same contrast over the shorter range."""
+        kept = self.radii <= r_max
+        return replace(self, radii=self.radii[kept], values=self.values[kept])
+
+    @property
+    def power(self) -> float:
+        """Power of the curve that is linear in one over the parent intensity: of g or K."""
+        return self.exponent / 2.0 if self.function == "L" else self.exponent
 
     @cached_property
-    def _target(self) -> Floats:
+    def target(self) -> Floats:
+        """(k,) the survey's curve to the power, nothing where it is not known."""
         known = np.where(np.isfinite(self.values), self.values, 0.0)
         return np.asarray(np.maximum(known, 0.0) ** self.exponent)
 
     @cached_property
-    def _root_weights(self) -> Floats:
-        """Square root of the trapezoid weights, none where the curve is not known."""
+    def root_weights(self) -> Floats:
+        """(k,) square root of the weights of the trapezoid rule, none where the curve is not known."""
         steps = np.gradient(self.radii)
         steps[[0, -1]] *= 0.5
-        return np.where(np.isfinite(self.values), np.sqrt(steps), 0.0)
+        weights = steps * self.radii**self.distance_weight
+        return np.where(np.isfinite(self.values), np.sqrt(weights), 0.0)
+
+    @cached_property
+    def base(self) -> Floats:
+        """(k,) g or K of randomness."""
+        return np.ones_like(self.radii) if self.function == "g" else np.pi * self.radii**2
+
+    def raised(self, linear: Floats) -> Floats:
+        """(..., k) the curve to its power, of g or K."""
+        positive = np.maximum(linear, 0.0)
+        if self.function == "L":
+            positive = positive / np.pi
+        return np.asarray(np.sqrt(positive) if self.power == 0.5 else positive**self.power)
+
+    def residuals_of(self, linear: Floats) -> Floats:
+        """(..., k) weighted differences of powers between a model's g or K and the survey's curve."""
+        return np.asarray(self.root_weights * (self.raised(linear) - self.target))
 
     def residuals(self, curve: Floats) -> Floats:
-        """(..., k) weighted differences of powers between a model's curve and the survey's."""
-        return np.asarray(self._root_weights * (np.maximum(curve, 0.0) ** self.exponent - self._target))
+        """The same of a curve as it is fitted: g, K or L."""
+        return np.asarray(self.root_weights * (np.maximum(curve, 0.0) ** self.exponent - self.target))
+
+    def value_of(self, model: ClusterModel) -> float:
+        """The contrast of a model."""
+        return float(np.sum(self.residuals_of(self.linear_of(model)) ** 2))
 
     def curve_of(self, model: ClusterModel) -> Floats:
         """The model's curve at the radii, as the survey's is expected to come out."""
-        base, excess = self.excess_of(model)
-        return np.asarray(base + excess / model.parent_intensity)
+        linear = self.linear_of(model)
+        return np.asarray(np.sqrt(linear / np.pi)) if self.function == "L" else linear
 
-    def excess_of(self, model: ClusterModel) -> tuple[Floats, Floats]:
-        """Curve of randomness and the model's excess over it, to be divided by the parent intensity."""
-        if self.function == "K":
-            return np.pi * self.radii**2, model.sibling_distribution(self.radii)
+    def linear_of(self, model: ClusterModel) -> Floats:
+        """The model's g or K at the radii, as the survey's is expected to come out."""
+        return np.asarray(self.base + sum_of_levels(model, self.excess_of))
+
+    def excess_of(self, level: ClusterModel) -> Floats:
+        """(k,) excess of a level's g or K over randomness, to be divided by the intensity of its centres."""
+        if self.function != "g":
+            return level.sibling_distribution(self.radii)
         if self.bandwidth is None:
-            return np.ones_like(self.radii), model.sibling_density(self.radii)
+            return level.sibling_density(self.radii)
         distances, weights = self._kernel
-        return np.ones_like(self.radii), np.sum(model.sibling_density(distances) * weights, axis=1)
+        return np.asarray(np.sum(level.sibling_density(distances) * weights, axis=1))
 
     @cached_property
     def _kernel(self) -> tuple[Floats, Floats]:
@@ -151,68 +211,6 @@ class Contrast:
         z = (distances - self.radii[:, None]) / self.bandwidth
         weights = weight * t * width * np.maximum(1.0 - z * z, 0.0)
         return distances, weights / weights.sum(axis=1, keepdims=True)
-
-
-def fit_contrast(
-    kind: type[ClusterModel],
-    contrast: Contrast,
-    intensity: float,
-    area: float,
-) -> ContrastFit:
-    """Fit a model with one scale parameter by minimum contrast.
-
-    The surface over parent intensity and scale is computed first; every local
-    minimum of it, at most six, is the start of a least-squares search in
-    logarithms.
-
-    Parameters
-    ----------
-    kind
-        A model class with parameters parent intensity, one scale in metres, mean offspring.
-    contrast
-        The survey's curve with range and power.
-    intensity
-        Points per square metre; mean offspring follows from it.
-    area
-        Area of the study area, m², which bounds the parent intensity.
-    """
-    scale_name = kind.scale_name
-    # from a tenth of a centre in the study area to ten centres a point
-    # clusters much narrower than the kernel of g, or than the first radius of K, all look the same
-    narrowest = contrast.radii[0] / 4.0 if contrast.bandwidth is None else contrast.bandwidth / NARROWEST
-    low = np.log([0.1 / area, narrowest])
-    high = np.log([10.0 * intensity, 2.0 * contrast.radii[-1]])
-
-    def model_at(theta: Floats) -> ClusterModel:
-        rho, scale = np.exp(theta)
-        return kind.of(rho, scale, intensity / rho)
-
-    def residuals(theta: Floats) -> Floats:
-        return contrast.residuals(contrast.curve_of(model_at(theta)))
-
-    rhos = np.linspace(low[0], high[0], SURFACE[0])
-    scales = np.linspace(low[1], high[1], SURFACE[1])
-    grid = np.empty(SURFACE)
-    for b, scale in enumerate(scales):
-        base, excess = contrast.excess_of(model_at(np.array([rhos[0], scale])))
-        grid[:, b] = np.sum(contrast.residuals(base + excess / np.exp(rhos)[:, None]) ** 2, axis=1)
-
-    best: tuple[float, Floats] | None = None
-    for a, b in _valleys(grid)[:STARTS]:
-        found = least_squares(
-            residuals, np.array([rhos[a], scales[b]]), bounds=(low, high), xtol=1e-10, ftol=1e-12
-        )
-        if best is None or 2 * found.cost < best[0]:
-            best = (2 * float(found.cost), found.x)
-    assert best is not None
-    value, theta = best
-    names = ("parent_intensity", scale_name)
-    near = 1e-3
-    on_bound = tuple(n for n, t, lo, hi in zip(names, theta, low, high, strict=True)
-                     if t - lo < near or hi - t < near)  # fmt: skip
-    bounds = {n: (float(np.exp(lo)), float(np.exp(hi))) for n, lo, hi in zip(names, low, high, strict=True)}
-    surface = ContrastSurface(np.exp(rhos), np.exp(scales), scale_name, grid)
-    return ContrastFit(model_at(theta), value, bounds, on_bound, surface)
 
 
 def _valleys(grid: Floats) -> list[tuple[int, int]]:

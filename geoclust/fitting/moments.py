@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import numpy.typing as npt
@@ -16,8 +16,10 @@ from geoclust.curves.second_order import SecondOrder, default_bandwidth
 from geoclust.errors import CannotTell, not_allowed
 from geoclust.fitting import status as verdicts
 from geoclust.fitting.bootstrap import bootstrap_draws, percentile_intervals
-from geoclust.fitting.contrast import EXPONENTS, Contrast, ContrastFit, checked_function, fit_contrast
+from geoclust.fitting.contrast import EXPONENTS, Contrast, ContrastFit, checked_function
 from geoclust.fitting.result import ClusterFit
+from geoclust.fitting.search import fit_contrast
+from geoclust.fitting.second_level import SecondLevel, second_level_test
 from geoclust.intensity.base import Intensity
 from geoclust.intensity.envelopes import inhomogeneous_envelopes
 from geoclust.models.base import ClusterModel
@@ -27,26 +29,28 @@ Floats = npt.NDArray[np.float64]
 Progress = Callable[[str, int, int], None]
 
 NODES = 128
-# K gathers the noise of all shorter distances, so its range follows the clusters; g does not
-RANGE_IN_SCALES = {"K": 6.0, "g": 12.0}
+# K and L gather the noise of all shorter distances, so their range follows the clusters; g does not
+RANGE_IN_SCALES = {"K": 6.0, "g": 12.0, "L": 6.0}
 
 
 @dataclass(frozen=True)
 class ContrastChoices:
-    """How a contrast is taken: the curve, its range and power, the bandwidth of g.
+    """How a contrast is taken: the curve, its range, power and weights, the bandwidth of g.
 
     Attributes
     ----------
     function
-        ``g`` or ``K``.
+        ``g``, ``K`` or ``L``.
     r_max
         Largest distance in metres; found from a first fit if None.
     r_min
-        Smallest distance in metres; half the bandwidth for g, zero for K if None.
+        Smallest distance in metres; half the bandwidth for g, zero for K and L if None.
     exponent
-        Power of the curve; ½ for g and ¼ for K if None.
+        Power of the curve; that of `EXPONENTS` if None.
     bandwidth
         Half width of the kernel of g in metres; 0.15 mean spacings if None.
+    distance_weight
+        Each squared difference counts its distance to this power; 0 for all alike.
     """
 
     function: str = "g"
@@ -54,6 +58,7 @@ class ContrastChoices:
     r_min: float | None = None
     exponent: float | None = None
     bandwidth: float | None = None
+    distance_weight: float = 0.0
 
     def __post_init__(self) -> None:
         checked_function(self.function)
@@ -63,6 +68,8 @@ class ContrastChoices:
                 raise not_allowed(name, "a positive number", value)
         if self.r_min is not None and not 0 <= self.r_min < (self.r_max or np.inf):
             raise not_allowed("r_min", "not negative and below r_max", self.r_min)
+        if not np.isfinite(self.distance_weight):
+            raise not_allowed("distance_weight", "a finite number", self.distance_weight)
 
 
 @dataclass(frozen=True, eq=False)
@@ -96,40 +103,61 @@ def fit_points(
     if choices.r_max is None and r_min > 0.5 * widest:
         raise not_allowed("r_min", f"at most {0.5 * widest:.4g} m here, unless r_max is given too", r_min)
     r_max = choices.r_max if choices.r_max is not None else widest
-    found = _fit_range(kind, local_xy, area, choices, r_max, workers, factors)
+    intensity = len(local_xy) / area.area
+    contrast, width = measured_contrast(kind, local_xy, area, choices, r_max, workers, factors)
+    fit = fit_contrast(kind, contrast, intensity, area.area)
     if choices.r_max is None:
-        shorter = RANGE_IN_SCALES[choices.function] * found.fit.model.scale
+        shorter = RANGE_IN_SCALES[choices.function] * fit.model.spread
         if shorter < 0.8 * widest:
-            r_max = max(shorter, 4.0 * found.bandwidth, 2.0 * r_min)
-            found = _fit_range(kind, local_xy, area, choices, r_max, workers, factors)
-    return found
+            r_max = max(shorter, 4.0 * width, 2.0 * r_min)
+            if len(kind.intensity_names) > 1:
+                contrast = contrast.up_to(r_max)
+                r_max = float(contrast.radii[-1])
+            else:
+                contrast, _ = measured_contrast(kind, local_xy, area, choices, r_max, workers, factors)
+            fit = fit_contrast(kind, contrast, intensity, area.area)
+    return MomentFit(fit, contrast, width, r_max)
 
 
-def _fit_range(
+def measured_contrast(
     kind: type[ClusterModel],
     local_xy: Floats,
     area: StudyArea,
     choices: ContrastChoices,
     r_max: float,
-    workers: int | None,
-    factors: Floats | None,
-) -> MomentFit:
+    workers: int | None = 1,
+    factors: Floats | None = None,
+) -> tuple[Contrast, float]:
+    """Measure the curve of points up to a distance; returns the contrast and the bandwidth of g.
+
+    For models of several levels the radii crowd at short distances, where the smallest clusters
+    are, so that the same curve serves for shorter ranges too.
+    """
     intensity = len(local_xy) / area.area
     width = choices.bandwidth if choices.bandwidth is not None else default_bandwidth(intensity)
+    g = choices.function == "g"
     if choices.r_min is not None:
         r_min = choices.r_min
     else:
-        r_min = min(0.5 * width, 0.5 * r_max) if choices.function == "g" else 0.0
-    radii = np.linspace(r_min, r_max, NODES + 1)
+        r_min = min(0.5 * width, 0.5 * r_max) if g else 0.0
+    if len(kind.intensity_names) > 1:
+        radii = r_min + (r_max - r_min) * np.linspace(0.0, 1.0, NODES + 1) ** 2
+    else:
+        radii = np.linspace(r_min, r_max, NODES + 1)
     radii = radii[1:] if radii[0] == 0 else radii
-    g = choices.function == "g"
     measured = SecondOrder.of_points(
         local_xy, area, radii, width if g else None, workers=workers, point_weights=factors
     )
-    values = measured.g_values() if g else measured.k_values()
+    if g:
+        values = measured.g_values()
+    else:
+        k = measured.k_values()
+        values = k if choices.function == "K" else np.sqrt(k / np.pi)
     exponent = choices.exponent if choices.exponent is not None else EXPONENTS[choices.function]
-    contrast = Contrast(choices.function, radii, values, exponent, width if g else None)
-    return MomentFit(fit_contrast(kind, contrast, intensity, area.area), contrast, width, r_max)
+    contrast = Contrast(
+        choices.function, radii, values, exponent, width if g else None, choices.distance_weight
+    )
+    return contrast, width
 
 
 def fit_by_contrast(
@@ -142,6 +170,7 @@ def fit_by_contrast(
     workers: int | None = None,
     progress: Progress | None = None,
     intensity: Intensity | None = None,
+    level_simulations: int = 99,
 ) -> ClusterFit:
     """Fit by minimum contrast, with a parametric bootstrap interval and a verdict.
 
@@ -149,8 +178,11 @@ def fit_by_contrast(
     the whole procedure, choice of range included; the interval of each
     parameter is that of the middle 95 % of the refitted values. With an intensity the curve
     is weighted by it, and the patterns are thinned and their intensity fitted anew.
+
+    For a nested process `level_simulations` patterns of the one-level fit tell whether the
+    second level earns its place (0 leaves that out); if it does not, there are no intervals.
     """
-    test_seed, boot_seed = rng.spawn(2)
+    test_seed, boot_seed, level_seed = rng.spawn(3)
     if survey.n < verdicts.FEWEST_POINTS:
         reason = verdicts.sentence("too-few-points", n=survey.n, fewest=verdicts.FEWEST_POINTS)
         raise CannotTell("too-few-points", reason)
@@ -160,15 +192,29 @@ def fit_by_contrast(
     def fit_again(points: Floats, again: Intensity | None) -> ClusterModel:
         return fit_points(kind, points, survey.area, choices, factors=factors_of(again)).fit.model
 
+    second: SecondLevel | None = None
+    if len(kind.intensity_names) > 1 and level_simulations and p_value <= verdicts.TEST_LEVEL:
+
+        def measure(points: Floats, r_max: float, again: Intensity | None) -> Contrast:
+            own = replace(choices, r_max=r_max)
+            return measured_contrast(kind, points, survey.area, own, r_max, factors=factors_of(again))[0]
+
+        second = second_level_test(
+            found.contrast, survey.local_xy, survey.area, measure, level_simulations, level_seed,
+            workers=workers, progress=progress, intensity=intensity,
+        )  # fmt: skip
+    refused = second is not None and second.p_value > verdicts.TEST_LEVEL
     draws = bootstrap_draws(
-        found.fit.model, survey.area, fit_again, bootstrap, boot_seed, workers=workers, progress=progress,
-        intensity=intensity,
+        found.fit.model, survey.area, fit_again, 0 if refused else bootstrap, boot_seed,
+        workers=workers, progress=progress, intensity=intensity,
     )  # fmt: skip
     intervals = percentile_intervals(draws)
     status, reason = verdicts.moment_verdict(
         found.fit.model, survey.area.area, r_max=found.r_max, on_bound=found.fit.on_bound,
         bounds=found.fit.bounds, p_value=p_value, intervals=intervals,
     )  # fmt: skip
+    if second is not None and refused:
+        status, reason = verdicts.named("one-level", p_value=second.p_value)
     contrast = found.contrast
     curve, fitted = fitted_curve(found)
     return ClusterFit(
@@ -180,6 +226,7 @@ def fit_by_contrast(
         choices={
             "function": contrast.function,
             "exponent": contrast.exponent,
+            "distance_weight": contrast.distance_weight,
             "r_min_m": float(contrast.radii[0]),
             "r_max_m": float(contrast.radii[-1]),
             "range_chosen_by": "user" if choices.r_max is not None else "first fit",
@@ -188,6 +235,7 @@ def fit_by_contrast(
             "contrast": found.fit.value,
             "bootstrap": bootstrap,
             "clustering_p_value": p_value,
+            **({} if second is None else second.record()),
         },
         curve=curve,
         fitted=fitted,
@@ -199,15 +247,19 @@ def fit_by_contrast(
 def fitted_curve(found: MomentFit) -> tuple[Curve, Floats]:
     """The curve that was fitted, and the model's values at its radii."""
     contrast = found.contrast
-    g = contrast.function == "g"
+    theory, unit = {
+        "g": (np.ones_like(contrast.radii), "1"),
+        "K": (np.pi * contrast.radii**2, "m²"),
+        "L": (contrast.radii.copy(), "m"),
+    }[contrast.function]
     curve = Curve(
         contrast.function,
         contrast.radii,
         contrast.values,
-        np.ones_like(contrast.radii) if g else np.pi * contrast.radii**2,
-        "1" if g else "m²",
+        theory,
+        unit,
         "isotropic",
-        found.bandwidth if g else None,
+        contrast.bandwidth,
     )
     return curve, contrast.curve_of(found.fit.model)
 

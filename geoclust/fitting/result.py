@@ -8,7 +8,7 @@ import numpy as np
 import numpy.typing as npt
 
 from geoclust.curves.curve import Curve
-from geoclust.fitting.contrast import ContrastSurface
+from geoclust.fitting.contrast import ContrastSurface, LevelSurface
 from geoclust.fitting.convergence import Sample
 from geoclust.fitting.pair_likelihoods import LikelihoodSurface
 from geoclust.intensity.base import Intensity
@@ -59,7 +59,7 @@ class ClusterFit:
     choices: dict[str, object]
     curve: Curve
     fitted: Floats
-    surface: ContrastSurface | LikelihoodSurface | None = None
+    surface: ContrastSurface | LevelSurface | LikelihoodSurface | None = None
     draws: dict[str, Floats] = field(default_factory=dict, repr=False)
     seed: int | None = None
     sample: Sample | None = field(default=None, repr=False)

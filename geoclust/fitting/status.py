@@ -25,6 +25,10 @@ REASONS: dict[str, str] = {
     "on-bound": (
         "The best value of {names} lies at the limit of the search ({bounds}), so the data do not fix it."
     ),
+    "one-level": (
+        "One level of clusters describes the points as well as two (p = {p_value:.2g} for the second level), "
+        "so there is no nesting to measure; fit the Thomas process (model thomas)."
+    ),
     "sigma-beyond-range": (
         "The fitted spread of a cluster ({scale:.4g} m) is more than half of the largest distance studied "
         "({r_max:.4g} m); the study area is too small to see whole clusters, or the density drifts across it."
@@ -73,8 +77,8 @@ def moment_verdict(
     """
     if p_value > TEST_LEVEL:
         return named("no-clustering", p_value=p_value, r_max=r_max)
-    if model.scale > 0.5 * r_max:
-        return named("sigma-beyond-range", scale=model.scale, r_max=r_max)
+    if model.spread > 0.5 * r_max:
+        return named("sigma-beyond-range", scale=model.spread, r_max=r_max)
     if on_bound:
         name = on_bound[0]
         described = next(p for p in model.described if p.name == name)
@@ -82,7 +86,7 @@ def moment_verdict(
         low, high = bounds[name]
         return named("on-bound", names=name.replace("_", " "),
                      bounds=f"{low * factor:.3g} to {high * factor:.3g} {unit}")  # fmt: skip
-    clusters = model.parent_intensity * area
+    clusters = model.parameters[model.intensity_names[0]] * area
     if clusters < FEWEST_CLUSTERS:
         return named("few-clusters", clusters=clusters, fewest=FEWEST_CLUSTERS)
     return flat_valley(model, intervals)
@@ -97,7 +101,8 @@ def flat_valley(model: ClusterModel, intervals: dict[str, tuple[float, float]]) 
     """Status and sentence if an interval is too wide to be an answer; otherwise ``ok``."""
     for p in model.described:
         low, high = intervals.get(p.name, (1.0, 1.0))
-        if high > WIDEST_INTERVAL * low:
+        # the ends of a shape that may be negative have no ratio
+        if p.above == 0 and high > WIDEST_INTERVAL * low:
             factor, unit = (1e4, "ha⁻¹") if p.per_area else (1.0, "" if p.unit == "1" else p.unit)
             figures = {"names": p.meaning, "low": low * factor, "high": high * factor, "unit": unit}
             return "flat-valley", sentence("flat-valley", **figures)

@@ -80,7 +80,12 @@ class ClusterModel(ABC):
     @property
     def intensity(self) -> float:
         """Points per square metre."""
-        return float(getattr(self, self.intensity_names[-1])) * self.mean_offspring
+        return self.centre_intensity * self.mean_offspring
+
+    @property
+    def centre_intensity(self) -> float:
+        """Centres that points belong to per square metre: those of the innermost level."""
+        return float(getattr(self, self.intensity_names[-1]))
 
     @classmethod
     def of(cls, parent_intensity: float, scale: float, mean_offspring: float) -> Self:

@@ -9,7 +9,7 @@ from matplotlib.figure import Figure
 from matplotlib.ticker import FuncFormatter, MaxNLocator
 from scipy.interpolate import RectBivariateSpline
 
-from geoclust.fitting.contrast import ContrastSurface
+from geoclust.fitting.contrast import ContrastSurface, LevelSurface
 from geoclust.fitting.pair_likelihoods import LikelihoodSurface
 from geoclust.report import canvas
 from geoclust.report.canvas import Floats
@@ -78,7 +78,9 @@ def _band_label(test: EnvelopeTest) -> str:
 
 
 def surface_figure(fit: ClusterFit) -> Figure | None:
-    """The surface of the fit over parent intensity and scale; None if it has none."""
+    """The surface of the fit over parent intensity and scale, or over two scales; None if it has none."""
+    if isinstance(fit.surface, LevelSurface):
+        return level_figure(fit)
     return likelihood_figure(fit) if isinstance(fit.surface, LikelihoodSurface) else contrast_figure(fit)
 
 
@@ -134,6 +136,37 @@ def likelihood_figure(fit: ClusterFit) -> Figure | None:
         return figure
 
 
+def level_figure(fit: ClusterFit) -> Figure | None:
+    """The contrast over both scales of a nested process, with the best intensities for each pair.
+
+    None if the fit has no such surface.
+    """
+    surface = fit.surface
+    if not isinstance(surface, LevelSurface):
+        return None
+    best = (fit.parameters[surface.outer_name], fit.parameters[surface.inner_name])
+    # the spline of the other surfaces would be torn where the outer scale is not the larger one
+    ratio = np.ma.masked_invalid(surface.contrast / np.nanmin(surface.contrast))
+    top = min(max(float(ratio.max()), 2.0), 32.0)
+    with canvas.look():
+        figure, ax = _axes()
+        ax.contourf(surface.outer_scales, surface.inner_scales, np.ma.minimum(ratio, top).T,
+                    levels=np.geomspace(1.0, top, 13), cmap=canvas.RAMP_COLOURS.reversed(), extend="max",
+                    norm="log")  # fmt: skip
+        lines = [level for level in _LEVELS if level < top]
+        widths = [2.0 if level == VALLEY else 0.8 for level in lines]
+        ax.contour(surface.outer_scales, surface.inner_scales, ratio.T, levels=lines, colors="white",
+                   linewidths=widths)  # fmt: skip
+        ax.plot(*best, "o", ms=8, mfc=canvas.UNSURE, mec="white", mew=1.4, label="estimate")
+        low = (ratio < 16.0).filled(False)
+        across, up = surface.outer_scales[low.any(axis=1)], surface.inner_scales[low.any(axis=0)]
+        _logarithmic(ax, np.append(across, best[0]), np.append(up, best[1]))
+        ax.set_xlabel(f"{surface.outer_name.replace('_', ' ')} (m)")
+        ax.set_ylabel(f"{surface.inner_name.replace('_', ' ')} (m)")
+        ax.legend(loc="upper left", frameon=True, framealpha=0.85, edgecolor="none", handletextpad=0.2)
+        return figure
+
+
 def _finish_surface(
     ax: Axes,
     fit: ClusterFit,
@@ -146,23 +179,27 @@ def _finish_surface(
     if len(cloud):
         ax.plot(*cloud.T, ".", ms=3, mfc="white", mec=canvas.INK, mew=0.3, label=label)
     ax.plot(*_estimate(fit), "o", ms=8, mfc=canvas.UNSURE, mec="white", mew=1.4, label="estimate")
-    ax.set_xscale("log")
-    ax.set_yscale("log")
-    ax.set_xlim(limits[0][0], limits[0][-1])
-    ax.set_ylim(limits[1][0], limits[1][-1])
-    for axis in (ax.xaxis, ax.yaxis):
-        axis.set_major_formatter(FuncFormatter(lambda v, _: f"{v:g}"))
-        axis.set_minor_formatter(FuncFormatter(_one_two_five))
-        axis.set_tick_params(which="minor", labelsize=9)
+    _logarithmic(ax, *limits)
     ax.set_xlabel("cluster centres per hectare (ha⁻¹)")
     ax.set_ylabel(f"{surface.scale_name.replace('_', ' ')} (m)")
     ax.legend(loc="upper right", frameon=True, framealpha=0.85, edgecolor="none", handletextpad=0.2)
 
 
+def _logarithmic(ax: Axes, across: Floats, up: Floats) -> None:
+    """Logarithmic axes that span these values."""
+    ax.set_xscale("log")
+    ax.set_yscale("log")
+    ax.set_xlim(across.min(), across.max())
+    ax.set_ylim(up.min(), up.max())
+    for axis in (ax.xaxis, ax.yaxis):
+        axis.set_major_formatter(FuncFormatter(lambda v, _: f"{v:g}"))
+        axis.set_minor_formatter(FuncFormatter(_one_two_five))
+        axis.set_tick_params(which="minor", labelsize=9)
+
+
 def _estimate(fit: ClusterFit) -> Floats:
     """Centres per hectare and scale of the fit."""
-    assert fit.surface is not None
-    return np.array([fit.parameters["parent_intensity"] * 1e4, fit.parameters[fit.surface.scale_name]])
+    return np.array([fit.parameters["parent_intensity"] * 1e4, fit.model.scale])
 
 
 def _shown(fit: ClusterFit, cloud: Floats) -> Floats:
