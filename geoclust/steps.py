@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from pathlib import Path
 from typing import Any
 
@@ -20,6 +20,7 @@ from geoclust.models.catalogue import model_by_name
 from geoclust.report.saved_fit import read_fit
 from geoclust.seeds import stream
 from geoclust.simulation.patterns import simulate_patterns
+from geoclust.terrain import intensity_of
 from geoclust.workflow import Analysis, Progress, read_extras, read_survey, write_layers
 
 HECTARE = 1e4
@@ -32,6 +33,7 @@ def locate(
     out: str | Path,
     fit_file: PathLike | None = None,
     model: str = "thomas",
+    covariates: Sequence[PathLike] = (),
     zones: PathLike | None = None,
     zones_layer: str | None = None,
     unsurveyed: PathLike | None = None,
@@ -56,6 +58,9 @@ def locate(
         Fit to take over (fit.json); a new one is made if not given.
     model
         Model of the new fit.
+    covariates
+        Rasters that may explain where points are, as for `geoclust.workflow.analyse`; those of the fit
+        if that is taken over.
     zones, zones_layer, unsurveyed, unsurveyed_layer, like, cell, overwrite, workers, progress
         As for `geoclust.workflow.analyse`.
     seed
@@ -77,10 +82,14 @@ def locate(
             survey, zones, zones_layer, unsurveyed, unsurveyed_layer, like, reading.get("crs"),
             bool(reading.get("repair")),
         )  # fmt: skip
+        intensity = intensity_of(covariates, survey)
         if fit_file is not None:
-            fit = read_fit(str(fit_file), survey)
+            fit = read_fit(str(fit_file), survey, intensity)
         else:
-            fit = fit_clusters(survey, model, rng=stream(seed, "fit"), workers=workers, progress=progress)
+            fit = fit_clusters(
+                survey, model, intensity=intensity, rng=stream(seed, "fit"), workers=workers,
+                progress=progress,
+            )  # fmt: skip
         centres = locate_centres(
             survey, fit, cell=cell, like=extras.grid, zones=extras.zones, unsurveyed=extras.unsurveyed,
             rng=stream(seed, "centres"), workers=workers, progress=progress,
@@ -103,6 +112,7 @@ def simulate(
     model: str = "thomas",
     parameters: Mapping[str, float] | None = None,
     fit_file: PathLike | None = None,
+    covariates: Sequence[PathLike] = (),
     random: bool = False,
     seed: int,
     overwrite: bool = False,
@@ -124,6 +134,8 @@ def simulate(
         Model and its values: intensities per hectare, lengths in metres.
     fit_file
         Fit to simulate from (fit.json).
+    covariates
+        Rasters that thin the clusters, as for `locate`; not with `parameters` or `random`.
     random
         Whether to simulate complete randomness with the intensity of the survey.
     seed, overwrite, workers, progress
@@ -143,6 +155,8 @@ def simulate(
     """
     kind = model_by_name(model)
     stated = _stated(kind, parameters) if parameters else None
+    if covariates and (random or stated is not None):
+        raise UsageError("Covariates belong to a fit; leave them out for stated parameters or randomness.")
     survey = read_survey(points, area, **reading)
     source: ClusterFit | ClusterModel | float
     if stated is not None:
@@ -150,9 +164,12 @@ def simulate(
     elif random:
         source = survey.intensity
     elif fit_file is not None:
-        source = read_fit(str(fit_file), survey)
+        source = read_fit(str(fit_file), survey, intensity_of(covariates, survey))
     else:
-        source = fit_clusters(survey, model, rng=stream(seed, "fit"), workers=workers, progress=progress)
+        source = fit_clusters(
+            survey, model, intensity=intensity_of(covariates, survey), rng=stream(seed, "fit"),
+            workers=workers, progress=progress,
+        )  # fmt: skip
     return _write_patterns(source, survey.area, Path(out), count, seed, overwrite, workers, progress)
 
 

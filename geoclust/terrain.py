@@ -116,6 +116,25 @@ def read_covariates(paths: Sequence[PathLike], area: StudyArea) -> list[Covariat
     return list(found.values())
 
 
+def intensity_of(paths: Sequence[PathLike], survey: Survey) -> LogLinearIntensity | None:
+    """The intensity fitted to a survey on covariate rasters; None without any.
+
+    Raises
+    ------
+    InputError, UsageError
+        As `read_covariates`, and if there are too few points to fit one.
+    """
+    if not paths:
+        return None
+    return _fitted(survey, read_covariates(paths, survey.area))
+
+
+def _fitted(survey: Survey, covariates: Sequence[Covariate]) -> LogLinearIntensity:
+    if survey.n < 2:
+        raise InputError(f"The survey has {survey.n} point(s), too few to relate them to covariates.")
+    return fit_intensity(survey, covariates)
+
+
 def explain(
     survey: Survey,
     covariates: Sequence[Covariate],
@@ -127,9 +146,7 @@ def explain(
     progress: Progress | None = None,
 ) -> Terrain:
     """Fit the intensity and test what is left."""
-    if survey.n < 2:
-        raise InputError(f"The survey has {survey.n} point(s), too few to relate them to covariates.")
-    intensity = fit_intensity(survey, covariates)
+    intensity = _fitted(survey, covariates)
     envelopes = inhomogeneous_envelopes(
         survey, intensity, radii, simulations=simulations, rng=rng, workers=workers, progress=progress
     )

@@ -260,12 +260,13 @@ def _analyse_survey(
     assessment: Assessment | None = None
     status, reason = "ok", ""
     notes = list(extras.warnings)
-    choices: dict[str, object] = {"edge_weight": "isotropic", "model": model, "simulations": simulations}
+    choices: dict[str, object] = {"model": model, "simulations": simulations}
     if survey.n >= 2:
         radii = default_radii(survey.area)
         envelopes = randomness_envelopes(
             survey, radii, simulations=simulations, rng=envelope_seed, workers=workers, progress=progress
         )
+        choices["edge_weight"] = envelopes["L"].curve.edge_weight
         choices["r_max_m"] = float(radii[-1])
         choices["bandwidth_m"] = envelopes["g"].curve.bandwidth
     terrain: Terrain | None = None
@@ -316,7 +317,8 @@ def curve_table(
     """All curves in the columns of curves.csv: K, L and g of the survey, and the fitted curve."""
     frames = []
     if "L" in envelopes:
-        k = k_function(survey, envelopes["L"].curve.radii)
+        shown = envelopes["L"].curve
+        k = k_function(survey, shown.radii, edge_weight=shown.edge_weight)
         frames.append(k.to_frame())
         frames += [test.curve.to_frame() for test in envelopes.values()]
     if fit is not None:

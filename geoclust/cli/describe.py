@@ -18,7 +18,7 @@ FIGURES = {"G": "G_nearest_neighbour", "F": "F_empty_space"}
 
 @click.command(short_help="Curves with envelopes, and tests of complete randomness.")
 @survey_arguments
-@takes(*READING, "simulations", "r_max", "bandwidth")
+@takes(*READING, "covariate", "simulations", "r_max", "bandwidth")
 @out_option("Write the curves as CSV to this file.")
 @click.option("--figures", type=click.Path(path_type=Path), metavar="DIR", show_default="none",
               help="Draw L, g, G, F and J into this folder, one SVG file each.")  # fmt: skip
@@ -26,6 +26,7 @@ FIGURES = {"G": "G_nearest_neighbour", "F": "F_empty_space"}
 def describe(
     points: Path,
     area: Path,
+    covariate: tuple[Path, ...],
     simulations: int,
     r_max: float | None,
     bandwidth: float | None,
@@ -44,15 +45,18 @@ def describe(
     r_m, estimate, theory, lower, upper; distances and L in metres, K in square metres, the others without
     unit. The tests are told at the end.
     """
+    import pandas as pd
+
     from geoclust import workflow
     from geoclust.curves.envelopes import randomness_envelopes
     from geoclust.curves.nearest import nearest_radii
     from geoclust.curves.quadrats import quadrat_test
-    from geoclust.curves.randomness import clark_evans_test
+    from geoclust.curves.randomness import clark_evans_test, loosmore_ford_test
     from geoclust.curves.second_order import default_radii
     from geoclust.report.canvas import save_figures
     from geoclust.report.figures import curve_figure
     from geoclust.seeds import stream
+    from geoclust.terrain import explain, read_covariates
 
     with Talk(quiet) as talk:
         survey = workflow.read_survey(points, area, **reading)
@@ -64,16 +68,28 @@ def describe(
             survey, radii, simulations=simulations, bandwidth=bandwidth,
             rng=stream(used, "curves"), workers=workers, progress=talk.progress,
         )  # fmt: skip
-        nearest_seed, spacing_seed, quadrat_seed = stream(used, "description").spawn(3)
+        nearest_seed, spacing_seed, quadrat_seed, deviation_seed, terrain_seed = stream(
+            used, "description"
+        ).spawn(5)
         running: dict[str, Any] = {"workers": workers, "progress": talk.progress}
         tests |= randomness_envelopes(
             survey, nearest_radii(survey.intensity), simulations=simulations, functions=("G", "F", "J"),
             rng=nearest_seed, **running,
         )  # fmt: skip
-        singles = [clark_evans_test(survey, simulations=simulations, rng=spacing_seed, **running)]
+        terrain = None
+        if covariate:
+            terrain = explain(
+                survey, read_covariates(covariate, survey.area), radii, simulations=simulations,
+                rng=terrain_seed, **running,
+            )  # fmt: skip
+        singles = [
+            loosmore_ford_test(survey, radii, simulations=simulations, rng=deviation_seed, **running),
+            clark_evans_test(survey, simulations=simulations, rng=spacing_seed, **running),
+        ]
         if survey.n >= 8:
             singles.append(quadrat_test(survey, simulations=simulations, rng=quadrat_seed))
-        table = workflow.curve_table(tests, None, survey).to_csv(index=False)
+        curves = [workflow.curve_table(tests, None, survey), *(terrain.frames() if terrain else [])]
+        table = pd.concat(curves, ignore_index=True).to_csv(index=False)
         if figures is not None:
             drawn = {f"{FIGURES.get(name, name)}.svg": curve_figure(test) for name, test in tests.items()}
             save_figures(drawn, figures, overwrite)
@@ -82,4 +98,6 @@ def describe(
             talk.say(f"complete randomness by {name}: p = {test.p_value:.3g}")
         for single in singles:
             talk.say(f"{single.method}: {single.statistic:.4g}, p = {single.p_value:.3g}")
+        for line in terrain.lines() if terrain is not None else []:
+            talk.say(line)
         talk.say(f"seed {used}")

@@ -16,7 +16,9 @@ from geoclust.errors import CannotTell
 
 @click.command(short_help="Fit a cluster model: how large, how many, how sure.")
 @survey_arguments
-@takes(*READING, "model", "method", "background", "chains", "function", "r_min", "r_max", "exponent")
+@takes(
+    *READING, "model", "covariate", "method", "background", "chains", "function", "r_min", "r_max", "exponent"
+)
 @takes("bandwidth", "bootstrap", "assess", "json")
 @out_option("Write the fit as JSON to this file, for --fit of locate and simulate.")
 @takes("seed", "overwrite", *RUNNING)
@@ -24,6 +26,7 @@ def fit(
     points: Path,
     area: Path,
     model: str,
+    covariate: tuple[Path, ...],
     method: str,
     background: bool,
     chains: int,
@@ -50,20 +53,21 @@ def fit(
     from geoclust import workflow
     from geoclust.fitting.assessment import assess_fit
     from geoclust.fitting.fit import fit_clusters
-    from geoclust.report.record import add_assessment, fit_record
+    from geoclust.report.record import add_assessment, add_terrain, fit_record
     from geoclust.report.tables import text_lines
     from geoclust.seeds import stream
+    from geoclust.terrain import intensity_of
 
     with Talk(quiet) as talk:
         survey = workflow.read_survey(points, area, **reading)
+        intensity = intensity_of(covariate, survey)
         used = chosen_seed(seed)
         found, status, reason = None, "ok", ""
         try:
             found = fit_clusters(
                 survey, model, method=method, background=background, chains=chains, function=function,
                 r_min=r_min, r_max=r_max, exponent=exponent, bandwidth=bandwidth, bootstrap=bootstrap,
-                rng=stream(used, "fit"), workers=workers,
-                progress=talk.progress,
+                intensity=intensity, rng=stream(used, "fit"), workers=workers, progress=talk.progress,
             )  # fmt: skip
             status, reason = found.status, found.reason
         except CannotTell as verdict:
@@ -72,6 +76,8 @@ def fit(
             status=status, reason=reason, fit=found, envelopes=None, centres=None, audit=survey.audit,
             choices={"model": model}, seed=used,
         )  # fmt: skip
+        if intensity is not None:
+            add_terrain(record, intensity, {})
         assessment = None
         if assess and found is not None and status == "ok":
             assessment = assess_fit(

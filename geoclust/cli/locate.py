@@ -16,13 +16,14 @@ from geoclust.cli.talk import Talk
 @click.command(short_help="Map the cluster centres and outline the clusters.")
 @survey_arguments
 @out_option("Folder to write, which must not hold other files.", required=True, folder=True)
-@takes("fit", "model", *PLACES, "like", "cell", *READING, "seed", "overwrite", *RUNNING)
+@takes("fit", "model", "covariate", *PLACES, "like", "cell", *READING, "seed", "overwrite", *RUNNING)
 def locate(
     points: Path,
     area: Path,
     out: Path,
     fit: Path | None,
     model: str,
+    covariate: tuple[Path, ...],
     zones: str | None,
     zones_layer: str | None,
     unsurveyed: str | None,
@@ -47,9 +48,9 @@ def locate(
     with Talk(quiet) as talk:
         used = chosen_seed(seed)
         found = steps.locate(
-            points, area, out=out, fit_file=fit, model=model, zones=zone_file, zones_layer=zone_layer,
-            unsurveyed=beyond_file, unsurveyed_layer=beyond_layer, like=like, cell=cell, seed=used,
-            overwrite=overwrite, workers=workers, progress=talk.progress, **reading,
+            points, area, out=out, fit_file=fit, model=model, covariates=covariate, zones=zone_file,
+            zones_layer=zone_layer, unsurveyed=beyond_file, unsurveyed_layer=beyond_layer, like=like,
+            cell=cell, seed=used, overwrite=overwrite, workers=workers, progress=talk.progress, **reading,
         )  # fmt: skip
         talk.say(f"seed {used}")
         click.echo("\n".join(found.lines()))

@@ -16,7 +16,7 @@ from geoclust.errors import UsageError, not_allowed
 @click.command(short_help="Simulate patterns in the study area, as a layer.")
 @survey_arguments
 @out_option("File to write: .gpkg, .fgb, .geojson or .csv.", required=True)
-@takes("count", "model", "parameter", "fit", "random", *READING, "seed", "overwrite", *RUNNING)
+@takes("count", "model", "parameter", "fit", "covariate", "random", *READING, "seed", "overwrite", *RUNNING)
 def simulate(
     points: Path,
     area: Path,
@@ -25,6 +25,7 @@ def simulate(
     model: str,
     parameter: tuple[str, ...],
     fit: Path | None,
+    covariate: tuple[Path, ...],
     random: bool,
     seed: int | None,
     overwrite: bool,
@@ -46,8 +47,8 @@ def simulate(
         used = chosen_seed(seed)
         written = steps.simulate(
             points, area, out=out, count=count, model=model, parameters=_values(parameter),
-            fit_file=fit, random=random, seed=used, overwrite=overwrite, workers=workers,
-            progress=talk.progress, **reading,
+            fit_file=fit, covariates=covariate, random=random, seed=used, overwrite=overwrite,
+            workers=workers, progress=talk.progress, **reading,
         )  # fmt: skip
         talk.say(f"{written:,} points in {count:,} patterns in {out}, seed {used}")
         return 0

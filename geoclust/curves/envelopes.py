@@ -157,7 +157,7 @@ def randomness_envelopes(
     bandwidth: float | None = None,
     level: float = 0.95,
     alternative: str = "different",
-    edge_weight: str = "isotropic",
+    edge_weight: str = "rigid-motion",
     functions: tuple[str, ...] = ("L", "g"),
     rng: np.random.Generator | int,
     workers: int | None = None,
@@ -181,7 +181,7 @@ def randomness_envelopes(
     level, alternative
         As for `global_envelope`.
     edge_weight
-        As for `k_function`.
+        As for `k_function`. Rigid-motion weights, which cost nothing a pair at any distance, unless given.
     functions
         Names among ``K``, ``L``, ``g``, ``G``, ``F``, ``J``; the last three are Kaplan-Meier estimates.
     rng

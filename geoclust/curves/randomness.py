@@ -89,7 +89,7 @@ def loosmore_ford_test(
     function: str = "L",
     simulations: int = 999,
     bandwidth: float | None = None,
-    edge_weight: str = "isotropic",
+    edge_weight: str = "rigid-motion",
     rng: np.random.Generator | int,
     workers: int | None = None,
     progress: Progress | None = None,
@@ -107,7 +107,7 @@ def loosmore_ford_test(
     simulations
         Patterns of as many uniform points in the study area.
     bandwidth, edge_weight
-        As for `pair_correlation`; G, F and J are Kaplan-Meier estimates.
+        As for `randomness_envelopes`; G, F and J are Kaplan-Meier estimates.
     rng
         Generator or seed; the answer does not depend on `workers`.
     workers

@@ -31,7 +31,7 @@ def inhomogeneous_envelopes(
     bandwidth: float | str | None = None,
     level: float = 0.95,
     alternative: str = "different",
-    edge_weight: str = "isotropic",
+    edge_weight: str = "rigid-motion",
     refit: bool = True,
     rng: np.random.Generator | int,
     workers: int | None = None,

@@ -21,19 +21,30 @@ class Step:
 
 _CURVES = Step(
     "Curves",
-    "Pairs of points are counted by distance; each pair is weighted by the inverse of the share of the "
-    "circle round "
-    "its first point, through its second, that lies in the study area, computed exactly for the drawn "
-    "boundary with "
-    "its holes and parts. The bandwidth c of the kernel of g is 0.15 mean spacings unless it was set; the "
-    "squared "
-    "intensity is estimated by n(n − 1)/|W|².",
+    "Pairs of points are counted by distance. For the envelopes each pair is weighted by the inverse of the "
+    "set covariance γ̄(d): the area common to the study area and its copy shifted by the distance d of the "
+    "pair, averaged over directions. For the fit it is weighted by the inverse of the share of the circle "
+    "round its first point, through its second, that lies in the study area. Both are computed exactly for "
+    "the drawn boundary with its holes and parts. The bandwidth of the kernel of g is 0.15 mean spacings "
+    "unless it was set; the squared intensity is estimated by n(n − 1)/|W|².",
     (
+        "K(r) = |W|² / n(n − 1) · Σ 1(d ≤ r) / γ̄(d)",
         "K(r) = |W|² / (n(n − 1) |W⁽ʳ⁾|) · Σ 1(d ≤ r) / share(x, d)",
         "L(r) = √(K(r)/π)",
-        "g(r) = |W|² / (n(n − 1) |W⁽ʳ⁾|) · Σ k(r − d) / (2πd · share(x, d))",
+        "g(r) as K, with k(r − d) / 2πd in place of 1(d ≤ r)",
     ),
     "Ripley 1977; Besag 1977; Ohser 1983; Stoyan & Stoyan 1994; Guan 2007",
+)
+_TERRAIN = Step(
+    "Covariates",
+    "The density of the points is log-linear in the covariates, fitted by the Poisson likelihood with a "
+    "quadrature over cells whose area inside the study area is exact; its standard errors allow for the "
+    "clusters. In curves beyond the covariates every pair is weighted by one over the fitted density at its "
+    "two places; patterns of that density alone, fitted anew each, give the envelope. Clusters are those "
+    "beyond the covariates: centres as likely everywhere, their points thinned in proportion to the fitted "
+    "density, which is taken as known there.",
+    ("λ(x) = exp(β₀ + Σ βⱼ zⱼ(x))",),
+    "Baddeley, Møller & Waagepetersen 2000; Waagepetersen 2007; Baddeley et al. 2014",
 )
 _TEST = Step(
     "Test of complete randomness",
@@ -159,9 +170,11 @@ _ANY_MODEL = (
 )
 
 
-def steps(fit: ClusterFit | None, located: bool) -> list[Step]:
+def steps(fit: ClusterFit | None, located: bool, covariates: bool = False) -> list[Step]:
     """The steps that were taken."""
     out = [_CURVES, _TEST]
+    if covariates:
+        out.append(_TERRAIN)
     if fit is not None:
         text, formulas = _MODELS.get(fit.model.name, _ANY_MODEL)
         out.append(Step(f"Model: {fit.model.name.replace('-', ' ')}", text, formulas, fit.model.source))
@@ -174,6 +187,10 @@ def steps(fit: ClusterFit | None, located: bool) -> list[Step]:
 
 
 REFERENCES: tuple[str, ...] = (
+    "Baddeley A, Møller J, Waagepetersen R (2000) Non- and semi-parametric estimation of interaction in "
+    "inhomogeneous point patterns. Statistica Neerlandica 54: 329–350",
+    "Baddeley A, Coeurjolly J-F, Rubak E, Waagepetersen R (2014) Logistic regression for spatial Gibbs point "
+    "processes. Biometrika 101: 377–392",
     "Baddeley A, Hardegen A, Lawrence T, Milne RK, Nair G, Rakshit S (2017) On two-stage Monte Carlo tests "
     "of composite hypotheses. Computational Statistics and Data Analysis 114: 75–87",
     "Besag J (1977) Discussion of Ripley. Journal of the Royal Statistical Society B 39: 193–195",
@@ -210,6 +227,8 @@ REFERENCES: tuple[str, ...] = (
     "van Lieshout MNM, Baddeley AJ (2002) Extrapolating and interpolating spatial patterns. In: Spatial "
     "cluster "
     "modelling. Chapman & Hall",
+    "Waagepetersen RP (2007) An estimating function approach to inference for inhomogeneous Neyman-Scott "
+    "processes. Biometrics 63: 252–258",
     "Vehtari A, Gelman A, Simpson D, Carpenter B, Bürkner P-C (2021) Rank-normalization, folding, and "
     "localization: an "
     "improved R̂ for assessing convergence of MCMC. Bayesian Analysis 16: 667–718",

@@ -107,7 +107,7 @@ def write_page(
     ok = status == "ok" and fit is not None
     shown = centres if ok else None
     pictures = _Pictures()
-    taken = method.steps(fit, shown is not None)
+    taken = method.steps(fit, shown is not None, terrain is not None)
     unused = [] if shown is not None else ["clusters"]
     told = answer.compose(
         survey=survey, envelopes=envelopes, fit=fit, status=status, reason=reason, centres=shown

@@ -13,6 +13,7 @@ from geoclust.curves.curve import Curve
 from geoclust.curves.second_order import k_function, pair_correlation
 from geoclust.errors import CannotTell, InputError
 from geoclust.fitting.result import ClusterFit
+from geoclust.intensity.loglinear import LogLinearIntensity
 from geoclust.models.base import ClusterModel
 from geoclust.models.catalogue import MODELS
 from geoclust.report.record import SCHEMA_VERSION
@@ -21,7 +22,7 @@ from geoclust.report.record import SCHEMA_VERSION
 _RADII = 129
 
 
-def read_fit(path: str | Path, survey: Survey) -> ClusterFit:
+def read_fit(path: str | Path, survey: Survey, intensity: LogLinearIntensity | None = None) -> ClusterFit:
     """Read a fit that `geoclust fit` or `geoclust analyse` has written.
 
     Parameters
@@ -30,26 +31,29 @@ def read_fit(path: str | Path, survey: Survey) -> ClusterFit:
         The file.
     survey
         The survey that it belongs to; its curve is computed again.
+    intensity
+        Fitted to the survey on the covariates of the record; None if it has none.
 
     Raises
     ------
     InputError
-        If the file is no such record.
+        If the file is no such record, or was made with other covariates.
     CannotTell
         If the record says that the data cannot tell.
     """
     record = _record(path)
+    _same_covariates(path, record, intensity)
     if record["status"] != "ok":
         raise CannotTell(str(record["status"]), f"The fit in {path} has no answer: {record['reason']}")
     model, intervals = _model(path, record)
     choices = record["choices"].get("fit")
     if not isinstance(choices, dict) or not isinstance(choices.get("r_max_m"), int | float):
         raise InputError(f"{path} does not say how the fit was made; make it again with geoclust fit.")
-    curve = _curve(survey, choices)
+    curve = _curve(survey, choices, None if intensity is None else intensity.at_own_points())
     fitted = model.pair_correlation(curve.radii) if curve.function == "g" else model.k_function(curve.radii)
     return ClusterFit(
         model=model, intervals=intervals, status="ok", reason="", method=str(record["method"]),
-        choices=choices,        curve=curve, fitted=fitted, seed=record["seed"],
+        choices=choices, curve=curve, fitted=fitted, seed=record["seed"], intensity=intensity,
     )  # fmt: skip
 
 
@@ -65,11 +69,6 @@ def _record(path: str | Path) -> dict[str, Any]:
     needed = {"schema", "status", "reason", "model", "parameters", "choices", "method", "seed"}
     if not isinstance(record, dict) or not needed <= set(record):
         raise InputError(f"{path} is no fit written by geoclust; give the fit.json of an earlier run.")
-    if record.get("intensity") is not None:
-        raise InputError(
-            f"{path} holds a fit beyond covariates, which cannot be taken over without them; give the "
-            "covariates to geoclust analyse."
-        )
     if str(record["schema"]).split(".")[0] != SCHEMA_VERSION.split(".")[0]:
         raise InputError(
             f"{path} was written in version {record['schema']} of its schema, this program reads "
@@ -101,10 +100,24 @@ def _model(path: str | Path, record: dict[str, Any]) -> tuple[ClusterModel, dict
     return kind(**values), intervals
 
 
-def _curve(survey: Survey, choices: dict[str, Any]) -> Curve:
+def _same_covariates(path: str | Path, record: dict[str, Any], intensity: LogLinearIntensity | None) -> None:
+    """Refuse a fit that was made with other covariates than those given."""
+    held = record.get("intensity")
+    names = [] if held is None else [c["name"] for c in held["coefficients"] if c["name"] != "intercept"]
+    given = [] if intensity is None else [name for name in intensity.coefficients if name != "intercept"]
+    if sorted(names) == sorted(given):
+        return
+    wanted = f"the covariates {', '.join(names)}" if names else "no covariates"
+    has = ", ".join(given) if given else "none"
+    raise InputError(f"{path} holds a fit with {wanted}; given were {has}. Give the same ones.")
+
+
+def _curve(survey: Survey, choices: dict[str, Any], intensity: np.ndarray | None) -> Curve:
     """The survey's curve over the range of the fit."""
     g = choices.get("function", choices.get("pilot_function", "g")) == "g"
     width = choices.get("bandwidth_m") if g else None
     radii = np.linspace(choices.get("r_min_m", width or 0.0), choices["r_max_m"], _RADII)
     radii = radii[radii > 0]
-    return pair_correlation(survey, radii, bandwidth=width) if g else k_function(survey, radii)
+    if g:
+        return pair_correlation(survey, radii, bandwidth=width, intensity_at_points=intensity)
+    return k_function(survey, radii, intensity_at_points=intensity)

@@ -113,7 +113,7 @@ def zone_table(zones: gpd.GeoDataFrame, heading: str) -> Table:
 
 
 _CHOICE_NAMES = {
-    "edge_weight": "edge weight",
+    "edge_weight": "edge weight of the envelopes",
     "model": "cluster model",
     "simulations": "random patterns for the envelopes",
     "r_max_m": "largest distance",
