@@ -7,13 +7,15 @@ import itertools
 import numpy as np
 import pytest
 import shapely
+from example_models import example
 from scipy.integrate import quad
 from scipy.optimize import differential_evolution, minimize
 
 from geoclust.area.study_area import StudyArea
 from geoclust.errors import UsageError
-from geoclust.fitting.contrast import Contrast, _valleys, fit_contrast
+from geoclust.fitting.contrast import Contrast, _valleys
 from geoclust.fitting.moments import ContrastChoices, fit_points
+from geoclust.fitting.search import fit_contrast
 from geoclust.models.catalogue import MODELS
 from geoclust.models.patterns import draw_pattern
 from geoclust.models.thomas import Thomas
@@ -23,6 +25,11 @@ CONTRASTS = {
     "g": ("g", None, 0.5),
     "g through its kernel": ("g", 6.0, 0.5),
     "K": ("K", None, 0.25),
+    "L": ("L", None, 1.0),
+    # rho enters linearly here, and is left out of the search
+    "g itself": ("g", None, 1.0),
+    "K itself": ("K", None, 1.0),
+    "squared L": ("L", None, 2.0),
 }
 
 
@@ -34,11 +41,16 @@ def contrast_of(model, name: str, radii) -> Contrast:
 
 @pytest.mark.parametrize("name", CONTRASTS)
 @pytest.mark.parametrize("kind", MODELS.values(), ids=MODELS)
-@pytest.mark.parametrize(("rho", "scale", "mu"), [(1e-4, 15.0, 6.0), (4e-5, 60.0, 3.0), (1e-3, 4.0, 1.2)])
-def test_exact_curve_in_exact_parameters_out(kind, name, rho, scale, mu):
-    model = kind.of(rho, scale, mu)
-    found = fit_contrast(kind, contrast_of(model, name, np.linspace(2.0, 200.0, 128)), rho * mu, AREA)
-    assert found.value == pytest.approx(0.0, abs=1e-10)
+@pytest.mark.parametrize(
+    ("rho", "scales", "mu"), [(1e-4, (50.0, 15.0), 6.0), (4e-5, (90.0, 40.0), 3.0), (1e-3, (20.0, 4.0), 1.2)]
+)
+def test_exact_curve_in_exact_parameters_out(kind, name, rho, scales, mu):
+    model = example(kind, 1e4 * rho, scales, mu)
+    contrast = contrast_of(model, name, np.linspace(2.0, 200.0, 128))
+    found = fit_contrast(kind, contrast, model.intensity, AREA)
+    assert found.value == pytest.approx(
+        0.0, abs=1e-10 * float(np.sum(contrast.residuals(0.0 * contrast.radii) ** 2))
+    )
     assert found.on_bound == ()
     for parameter, value in model.parameters.items():
         assert found.model.parameters[parameter] == pytest.approx(value, rel=1e-4), parameter
@@ -175,7 +187,7 @@ def test_clusters_narrower_than_the_bandwidth_are_measured(sigma, function):
 @pytest.mark.parametrize(
     ("choices", "said"),
     [
-        ({"function": "F"}, "g, K"),
+        ({"function": "F"}, "g, K, L"),
         ({"r_max": 0.0}, "r_max"),
         ({"r_max": np.nan}, "r_max"),
         ({"r_min": -1.0}, "r_min"),

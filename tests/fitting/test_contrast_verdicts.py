@@ -186,7 +186,7 @@ def test_every_choice_is_reported(clear_survey):
 
 @pytest.mark.parametrize(
     ("choices", "said"),
-    [({"method": "guess"}, "minimum-contrast"), ({"bootstrap": 5}, "39"), ({"function": "J"}, "g, K")],
+    [({"method": "guess"}, "minimum-contrast"), ({"bootstrap": 5}, "39"), ({"function": "J"}, "g, K, L")],
 )
 def test_bad_arguments(clear_survey, choices, said):
     with pytest.raises(UsageError, match=said):

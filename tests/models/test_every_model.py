@@ -7,6 +7,7 @@ import itertools
 import numpy as np
 import pytest
 import shapely
+from example_models import example
 from scipy.integrate import quad
 from scipy.stats import kstest
 
@@ -17,20 +18,6 @@ from geoclust.models.catalogue import MODELS, model_by_name
 
 # chance of a false alarm of each randomised check; the seeds are fixed, so it is met or not for good
 RARE = 1e-3
-
-
-def example(kind: type[ClusterModel]) -> ClusterModel:
-    """A model with plausible parameters: one centre a hectare, scales of some metres, six points each."""
-    scales = iter((40.0, 15.0, 8.0))
-    values = {}
-    for p in kind.described:
-        if p.per_area:
-            values[p.name] = 1e-4
-        elif p.unit == "m":
-            values[p.name] = next(scales)
-        else:
-            values[p.name] = 6.0 if p.name == "mean_offspring" else 0.75
-    return kind(**values)
 
 
 @pytest.fixture(params=sorted(MODELS), name="model")
@@ -53,17 +40,24 @@ def ring_integral(density, low: float, high: float) -> float:
 def test_parameters_come_back_and_are_described(model):
     assert list(model.parameters) == [p.name for p in type(model).described]
     assert all(p.meaning and p.unit for p in type(model).described)
-    assert "parent_intensity" in {p.name for p in type(model).described if p.per_area}
+    assert set(type(model).intensity_names) == {p.name for p in type(model).described if p.per_area}
     assert type(model)(**model.parameters) == model
     assert model_by_name(model.name) is type(model)
-    assert model.intensity == model.parent_intensity * model.mean_offspring
+    centres = model.parameters[type(model).intensity_names[-1]]
+    assert model.intensity == centres * model.mean_offspring
+    assert model.centre_intensity == centres
+    values = {name: value for name, value in model.parameters.items() if name != "mean_offspring"}
+    again = type(model).with_intensity(values, model.intensity)
+    assert again.mean_offspring == pytest.approx(model.mean_offspring, rel=1e-12)
 
 
-@pytest.mark.parametrize("bad", [0.0, -1.0, np.nan, np.inf])
-def test_bad_parameters_are_refused_by_name(model, bad):
-    for name in model.parameters:
-        with pytest.raises(UsageError, match=name):
-            type(model)(**{**model.parameters, name: bad})
+@pytest.mark.parametrize("below", [0.0, 1.0, np.nan, np.inf])
+def test_bad_parameters_are_refused_by_name(model, below):
+    """At its lower limit and below; not a number; infinite."""
+    for p in type(model).described:
+        bad = below if below == np.inf else p.above - below
+        with pytest.raises(UsageError, match=p.name):
+            type(model)(**{**model.parameters, p.name: bad})
 
 
 def test_density_of_offspring_and_of_siblings_are_densities(model):
@@ -99,12 +93,21 @@ def test_siblings_differ_by_two_independent_offsets(model, r):
 
 
 def test_pair_correlation_and_k_follow_from_the_siblings(model):
+    """With several levels the excesses add up; the innermost level is that of the siblings."""
     radii = np.linspace(0.5, 200.0, 60)
-    rho = model.parent_intensity
-    np.testing.assert_allclose(model.pair_correlation(radii), 1 + model.sibling_density(radii) / rho)
-    np.testing.assert_allclose(
-        model.k_function(radii), np.pi * radii**2 + model.sibling_distribution(radii) / rho
-    )
+    g, k = np.ones(60), np.pi * radii**2
+    for level in model.levels:
+        g = g + level.sibling_density(radii) / level.parent_intensity
+        k = k + level.sibling_distribution(radii) / level.parent_intensity
+        assert level.intensity == pytest.approx(model.intensity, rel=1e-12)
+    np.testing.assert_allclose(model.pair_correlation(radii), g)
+    np.testing.assert_allclose(model.k_function(radii), k)
+    inner = model.levels[-1]
+    assert inner.parent_intensity == model.centre_intensity
+    np.testing.assert_allclose(inner.sibling_density(radii), model.sibling_density(radii))
+    for low, high in ((0.5, 30.0), (30.0, 200.0)):
+        grown = float(model.k_function(high) - model.k_function(low))
+        assert grown == pytest.approx(ring_integral(model.pair_correlation, low, high), rel=1e-9)
     np.testing.assert_allclose(np.pi * model.l_function(radii) ** 2, model.k_function(radii))
     assert np.all(model.pair_correlation(radii) >= 1)
 
@@ -136,21 +139,28 @@ def test_share_of_the_study_area_is_that_of_the_offspring(model):
     area = StudyArea(shapely.Polygon([(0, 0), (90, 0), (60, 80), (10, 50)]))
     rng = np.random.default_rng(62)
     centres = np.array([[40.0, 30.0], [0.0, 0.0], [75.0, 60.0], [-20.0, 30.0]])
-    shares = type(model).area_shares(area, centres - area.origin, model.scale)
+    shares = model.shares_inside(area, centres - area.origin)
     for centre, share in zip(centres, shares, strict=True):
         drawn = area.contains(centre + model.draw_offsets(20_000, rng)).mean()
         assert drawn == pytest.approx(share, abs=4 * np.sqrt(share * (1 - share) / 20_000) + 1e-6)
     side = 2e5
     half_plane = StudyArea(shapely.box(-side, -side, side, 0.0))
-    on_the_edge = type(model).area_shares(half_plane, np.zeros((1, 2)) - half_plane.origin, model.scale)
+    on_the_edge = model.shares_inside(half_plane, np.zeros((1, 2)) - half_plane.origin)
     assert on_the_edge[0] == pytest.approx(0.5, abs=1e-4)
 
 
 def test_scale_by_any_name(model):
     kind = type(model)
-    again = kind.of(model.parent_intensity, model.scale, model.mean_offspring)
-    assert again.scale == model.scale == model.parameters[kind.scale_name]
-    assert again.parent_intensity == model.parent_intensity
+    assert model.scale == model.parameters[kind.scale_name]
+    assert model.spread >= model.scale
+    if len(kind.intensity_names) == 1:
+        again = kind.of(model.parent_intensity, model.scale, model.mean_offspring)
+        assert again.scale == model.scale
+        assert again.parent_intensity == model.parent_intensity
+        area = StudyArea(shapely.box(0, 0, 50, 50))
+        at = np.array([[3.0, 4.0], [-30.0, 10.0]])
+        shares = kind.area_shares(area, at, model.scale)
+        np.testing.assert_allclose(shares, again.shares_inside(area, at), rtol=1e-12)
 
 
 def test_unknown_model_is_answered_with_the_legal_ones():

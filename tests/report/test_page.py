@@ -11,6 +11,7 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+from example_models import example as example_model
 
 from geoclust.fitting.status import REASONS
 from geoclust.models.catalogue import MODELS
@@ -274,7 +275,7 @@ def test_every_source_has_its_reference(example):
 
 def test_every_model_is_explained(example):
     for name, kind in MODELS.items():
-        model = kind.of(example.fit.model.parent_intensity, example.fit.model.scale, 6.0)
+        model = example_model(kind)
         taken = method.steps(dataclasses.replace(example.fit, model=model, intervals={}), True)
         assert any(name in step.name.replace(" ", "-") and step.formulas for step in taken)
         year = re.findall(r"\d{4}", kind.source)[0]
