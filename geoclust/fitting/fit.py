@@ -55,7 +55,7 @@ def fit_clusters(
         Waagepetersen 2004), or one of the quick looks: ``minimum-contrast`` (Diggle & Gratton
         1984), ``palm`` (Palm likelihood; Tanaka, Ogata & Stoyan 2008) or ``composite-likelihood``
         (of pairs of points; Guan 2006). ``posterior`` if not given; ``minimum-contrast`` for the
-        models ``nested-thomas`` and ``variance-gamma``, which it does not fit.
+        models ``nested-thomas`` and ``variance-gamma``, which the posterior does not fit.
     function
         Curve that the contrast is taken on: ``g``, ``K`` or ``L``. The posterior starts from that fit; the
         likelihoods of pairs take no curve.
@@ -117,7 +117,7 @@ def fit_clusters(
     if method in FORMS:
         paired = fit_by_likelihood(
             survey, kind, method, choices=choices, bootstrap=bootstrap, rng=np.random.default_rng(rng),
-            workers=workers, progress=progress, intensity=intensity,
+            workers=workers, progress=progress, intensity=intensity, level_simulations=level_simulations,
         )  # fmt: skip
         return replace(paired, seed=rng if isinstance(rng, int) else None, intensity=intensity)
     found = fit_by_contrast(

@@ -17,9 +17,18 @@ from geoclust.fitting import status as verdicts
 from geoclust.fitting.bootstrap import bootstrap_draws, percentile_intervals
 from geoclust.fitting.contrast import NARROWEST, Contrast
 from geoclust.fitting.likelihood_search import LikelihoodFit, fit_likelihood, rough_spread
-from geoclust.fitting.moments import NODES, ContrastChoices, clustering_p_value, factors_of
+from geoclust.fitting.moments import (
+    NODES,
+    ContrastChoices,
+    clustering_p_value,
+    factors_of,
+    measured_contrast,
+    nesting_test,
+)
+from geoclust.fitting.moments import RANGE_IN_SCALES as CURVE_RANGE
 from geoclust.fitting.pair_likelihoods import COMPOSITE, PALM, PairLikelihood
 from geoclust.fitting.result import ClusterFit
+from geoclust.fitting.second_level import SecondLevel
 from geoclust.intensity.base import Intensity
 from geoclust.models.base import ClusterModel
 
@@ -98,17 +107,21 @@ def fit_by_likelihood(
     workers: int | None = None,
     progress: Progress | None = None,
     intensity: Intensity | None = None,
+    level_simulations: int = 99,
 ) -> ClusterFit:
     """Fit by a likelihood of pairs, with a parametric bootstrap interval and a verdict.
 
     The bootstrap draws patterns from the fit in the same study area and repeats the whole
-    procedure, choice of range included.
+    procedure, choice of range included. Whether a second level earns its place is
+    told as for the contrast on g, whatever the fit: `level_simulations` patterns of one level.
     """
     if choices.function != "g":
         raise not_allowed("function", f"left out for {form}, which is fitted on no curve", choices.function)
     if choices.exponent is not None:
         raise not_allowed("exponent", f"left out for {form}, which has no power", choices.exponent)
-    test_seed, boot_seed = rng.spawn(2)
+    if choices.distance_weight != 0:
+        raise not_allowed("distance_weight", f"left out for {form}", choices.distance_weight)
+    test_seed, boot_seed, level_seed = rng.spawn(3)
     if survey.n < verdicts.FEWEST_POINTS:
         reason = verdicts.sentence("too-few-points", n=survey.n, fewest=verdicts.FEWEST_POINTS)
         raise CannotTell("too-few-points", reason)
@@ -118,9 +131,21 @@ def fit_by_likelihood(
     def fit_again(points: Floats, again: Intensity | None) -> ClusterModel:
         return fit_pairs(kind, form, points, survey.area, choices, along=again).model
 
+    second: SecondLevel | None = None
+    if len(kind.intensity_names) > 1 and level_simulations and p_value <= verdicts.TEST_LEVEL:
+        widest = 0.25 * float(np.sqrt(survey.area.area))
+        far = max(found.likelihood.r_max, min(widest, CURVE_RANGE["g"] * found.model.spread))
+        plain = ContrastChoices(r_max=far, bandwidth=choices.bandwidth)
+        contrast, _ = measured_contrast(
+            kind, survey.local_xy, survey.area, plain, far, workers, factors_of(intensity)
+        )
+        second = nesting_test(
+            survey, kind, contrast, plain, level_simulations, level_seed, workers, progress, intensity
+        )
+    refused = second is not None and second.p_value > verdicts.TEST_LEVEL
     draws = bootstrap_draws(
-        found.model, survey.area, fit_again, bootstrap, boot_seed, workers=workers, progress=progress,
-        intensity=intensity,
+        found.model, survey.area, fit_again, 0 if refused else bootstrap, boot_seed, workers=workers,
+        progress=progress, intensity=intensity,
     )  # fmt: skip
     intervals = percentile_intervals(draws)
     status, reason = verdicts.moment_verdict(
@@ -128,6 +153,8 @@ def fit_by_likelihood(
         bounds=found.bounds, p_value=p_value, intervals=intervals,
     )  # fmt: skip
     width = choices.bandwidth if choices.bandwidth is not None else default_bandwidth(survey.intensity)
+    if second is not None and refused:
+        status, reason = verdicts.named("one-level", p_value=second.p_value)
     surface = found.surface
     if surface is not None and intervals:
         surface = replace(surface, level=_level(kind, found, draws))
@@ -148,6 +175,7 @@ def fit_by_likelihood(
             "log_likelihood_over_randomness": found.value,
             "bootstrap": bootstrap,
             "clustering_p_value": p_value,
+            **({} if second is None else second.record()),
         },
         curve=curve,
         fitted=fitted,

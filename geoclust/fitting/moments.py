@@ -194,15 +194,9 @@ def fit_by_contrast(
 
     second: SecondLevel | None = None
     if len(kind.intensity_names) > 1 and level_simulations and p_value <= verdicts.TEST_LEVEL:
-
-        def measure(points: Floats, r_max: float, again: Intensity | None) -> Contrast:
-            own = replace(choices, r_max=r_max)
-            return measured_contrast(kind, points, survey.area, own, r_max, factors=factors_of(again))[0]
-
-        second = second_level_test(
-            found.contrast, survey.local_xy, survey.area, measure, level_simulations, level_seed,
-            workers=workers, progress=progress, intensity=intensity,
-        )  # fmt: skip
+        second = nesting_test(
+            survey, kind, found.contrast, choices, level_simulations, level_seed, workers, progress, intensity
+        )
     refused = second is not None and second.p_value > verdicts.TEST_LEVEL
     draws = bootstrap_draws(
         found.fit.model, survey.area, fit_again, 0 if refused else bootstrap, boot_seed,
@@ -242,6 +236,29 @@ def fit_by_contrast(
         surface=found.fit.surface,
         draws=draws,
     )
+
+
+def nesting_test(
+    survey: Survey,
+    kind: type[ClusterModel],
+    contrast: Contrast,
+    choices: ContrastChoices,
+    simulations: int,
+    rng: np.random.Generator,
+    workers: int | None,
+    progress: Progress | None,
+    intensity: Intensity | None,
+) -> SecondLevel:
+    """Whether the second level of a nested process earns its place, by the contrast of the survey's curve."""
+
+    def measure(points: Floats, r_max: float, again: Intensity | None) -> Contrast:
+        own = replace(choices, r_max=r_max)
+        return measured_contrast(kind, points, survey.area, own, r_max, factors=factors_of(again))[0]
+
+    return second_level_test(
+        contrast, survey.local_xy, survey.area, measure, simulations, rng, workers=workers,
+        progress=progress, intensity=intensity,
+    )  # fmt: skip
 
 
 def fitted_curve(found: MomentFit) -> tuple[Curve, Floats]:

@@ -372,6 +372,14 @@ def test_range_is_settable_and_reported(survey):
         assert fit.intervals == {}
 
 
+def test_one_level_of_clusters_is_not_taken_for_two(survey):
+    fit = fit_clusters(survey, "nested-thomas", method=PALM, bootstrap=39, level_simulations=19, rng=1)
+    assert fit.status == "one-level"
+    assert fit.choices["second_level_p_value"] > 0.05
+    assert fit.intervals == {}
+    assert fit.surface is None
+
+
 def test_random_points_are_no_clusters():
     survey = Survey(PLOT.uniform_points(150, 1), PLOT)
     for form in FORMS:
@@ -385,6 +393,7 @@ def test_random_points_are_no_clusters():
     [
         ({"function": "K"}, "function must be left out for palm"),
         ({"exponent": 0.5}, "exponent must be left out for palm"),
+        ({"distance_weight": 1.0}, "distance_weight must be left out for palm"),
         ({"background": True}, "background must be false for palm"),
         ({"bootstrap": 5}, "39"),
         ({"r_max": 0.0}, "r_max"),
