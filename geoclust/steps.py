@@ -16,7 +16,7 @@ from geoclust.layers.package import PatternWriter
 from geoclust.layers.results_folder import results_folder
 from geoclust.layers.survey_layers import PathLike
 from geoclust.models.base import ClusterModel
-from geoclust.models.catalogue import model_by_name
+from geoclust.models.catalogue import check_sampled, model_by_name
 from geoclust.report.saved_fit import read_fit
 from geoclust.seeds import stream
 from geoclust.simulation.patterns import simulate_patterns
@@ -75,7 +75,9 @@ def locate(
     """
     if like is not None and cell is not None:
         raise UsageError("Give either a template raster or a cell size, not both.")
-    model_by_name(model)
+    kind = model_by_name(model)
+    if fit_file is None:
+        check_sampled(kind)
     with results_folder(out, overwrite) as folder:
         survey = read_survey(points, area, **reading)
         extras = read_extras(
@@ -198,7 +200,8 @@ def _stated(kind: type[ClusterModel], given: Mapping[str, float]) -> ClusterMode
         missing = [name for name in names if name not in given]
         what = f"{wrong[0]} is none of them" if wrong else f"{missing[0]} is missing"
         raise UsageError(f"The model {kind.name} has the parameters {', '.join(names)}; {what}.")
-    for name, value in given.items():
-        if not 0 < value < float("inf"):
-            raise not_allowed(name, "a positive finite number", value)
+    for p in kind.described:
+        if not p.above < given[p.name] < float("inf"):
+            allowed = "a positive finite number" if p.above == 0 else f"a finite number above {p.above:g}"
+            raise not_allowed(p.name, allowed, given[p.name])
     return kind(**{p.name: given[p.name] / (HECTARE if p.per_area else 1.0) for p in kind.described})

@@ -32,7 +32,7 @@ from geoclust.layers.package import PatternWriter, write_package
 from geoclust.layers.raster import Grid, grid_like
 from geoclust.layers.results_folder import results_folder
 from geoclust.layers.survey_layers import PathLike, read_polygons, read_survey_layers
-from geoclust.models.catalogue import model_by_name
+from geoclust.models.catalogue import SAMPLED, model_by_name
 from geoclust.report.page import write_page
 from geoclust.report.record import add_assessment, add_terrain, fit_record, library_versions, write_record
 from geoclust.seeds import stream
@@ -188,7 +188,12 @@ def analyse(
     InputError, UsageError, OutputError
         One sentence; nothing is written then.
     """
-    model_by_name(model)
+    kind = model_by_name(model)
+    if not kind.sampled and (zones is not None or unsurveyed is not None):
+        raise UsageError(
+            f"zones and unsurveyed get their numbers from the cluster centres, which can be located for the "
+            f"models {', '.join(SAMPLED)}; leave them out, or take one of these models."
+        )
     if like is not None and cell is not None:
         raise UsageError("Give either a template raster or a cell size, not both.")
     if simulations < 39:
@@ -293,6 +298,7 @@ def _analyse_survey(
                 intensity=None if terrain is None else terrain.intensity, rng=fit_seed.spawn(1)[0],
                 workers=workers, progress=progress,
             )  # fmt: skip
+        choices["method"] = fit.method
         status, reason = fit.status, fit.reason
         if fit.ok:
             part, least, most = REFITS
@@ -300,10 +306,16 @@ def _analyse_survey(
                 survey, fit, simulations=min(max(simulations // part, least), most),
                 rng=stream(seed, "assessment"), workers=workers, progress=progress,
             )  # fmt: skip
-            centres = locate_centres(
-                survey, fit, cell=cell, like=extras.grid, zones=extras.zones, unsurveyed=extras.unsurveyed,
-                rng=centre_seed, workers=workers, progress=progress,
-            )  # fmt: skip
+            if fit.model.sampled:
+                centres = locate_centres(
+                    survey, fit, cell=cell, like=extras.grid, zones=extras.zones,
+                    unsurveyed=extras.unsurveyed, rng=centre_seed, workers=workers, progress=progress,
+                )  # fmt: skip
+            else:
+                notes.append(
+                    f"The model {model} is fitted by {fit.method}, and there is no map of centres: they can "
+                    f"be located for the models {', '.join(SAMPLED)}."
+                )
     except CannotTell as verdict:
         status, reason = verdict.status, str(verdict)
     return Analysis(

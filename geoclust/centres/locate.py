@@ -17,6 +17,7 @@ from geoclust.fitting.convergence import sample_until_converged
 from geoclust.fitting.result import ClusterFit
 from geoclust.fitting.sampling import ChainSetup
 from geoclust.layers.raster import Grid
+from geoclust.models.catalogue import check_sampled
 
 Progress = Callable[[str, int, int], None]
 
@@ -73,8 +74,10 @@ def locate_centres(
     CannotTell
         If the fit's status is not ``ok``: there is no map that the data could carry.
     UsageError
-        If `cell` and `like` are both given, or fewer than two chains asked for.
+        If the model is none whose centres can be sampled, `cell` and `like` are both given, or fewer
+        than two chains asked for.
     """
+    check_sampled(type(fit.model))
     if not fit.ok:
         raise CannotTell(fit.status, f"There is no map of centres: {fit.reason}")
     if cell is not None and like is not None:

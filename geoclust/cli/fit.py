@@ -19,7 +19,7 @@ from geoclust.errors import CannotTell
 @takes(
     *READING, "model", "covariate", "method", "background", "chains", "function", "r_min", "r_max", "exponent"
 )
-@takes("bandwidth", "bootstrap", "assess", "json")
+@takes("bandwidth", "distance_weight", "level_simulations", "bootstrap", "assess", "json")
 @out_option("Write the fit as JSON to this file, for --fit of locate and simulate.")
 @takes("seed", "overwrite", *RUNNING)
 def fit(
@@ -27,7 +27,7 @@ def fit(
     area: Path,
     model: str,
     covariate: tuple[Path, ...],
-    method: str,
+    method: str | None,
     background: bool,
     chains: int,
     json: bool,
@@ -41,6 +41,8 @@ def fit(
     r_max: float | None,
     exponent: float | None,
     bandwidth: float | None,
+    distance_weight: float,
+    level_simulations: int,
     bootstrap: int,
     assess: bool,
     **reading: Any,
@@ -52,12 +54,14 @@ def fit(
     """
     from geoclust import workflow
     from geoclust.fitting.assessment import assess_fit
-    from geoclust.fitting.fit import fit_clusters
+    from geoclust.fitting.fit import fit_clusters, method_for
+    from geoclust.models.catalogue import model_by_name
     from geoclust.report.record import add_assessment, add_terrain, fit_record
     from geoclust.report.tables import text_lines
     from geoclust.seeds import stream
     from geoclust.terrain import intensity_of
 
+    method_for(model_by_name(model), method)
     with Talk(quiet) as talk:
         survey = workflow.read_survey(points, area, **reading)
         intensity = intensity_of(covariate, survey)
@@ -66,7 +70,8 @@ def fit(
         try:
             found = fit_clusters(
                 survey, model, method=method, background=background, chains=chains, function=function,
-                r_min=r_min, r_max=r_max, exponent=exponent, bandwidth=bandwidth, bootstrap=bootstrap,
+                r_min=r_min, r_max=r_max, exponent=exponent, bandwidth=bandwidth,
+                distance_weight=distance_weight, level_simulations=level_simulations, bootstrap=bootstrap,
                 intensity=intensity, rng=stream(used, "fit"), workers=workers, progress=talk.progress,
             )  # fmt: skip
             status, reason = found.status, found.reason

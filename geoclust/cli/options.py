@@ -112,17 +112,23 @@ _DECLARED = (
            kind=click.IntRange(min=39), metavar="COUNT"),
     Option("--method", "Way of fitting: posterior, or a quick look by minimum-contrast, palm or "
            "composite-likelihood.",
-           default="posterior", kind=str, metavar="NAME"),
+           kind=str, metavar="NAME",
+           otherwise="posterior; minimum-contrast for nested-thomas and variance-gamma"),
     Option("--background", "Points may belong to no cluster (posterior only)."),
     Option("--chains", "Chains of the sampler, at least 2.", default=4, kind=click.IntRange(min=2),
            metavar="COUNT"),
-    Option("--function", "Curve to fit the model on.", default="g", kind=click.Choice(["g", "K"])),
+    Option("--function", "Curve to fit the model on.", default="g", kind=click.Choice(["g", "K", "L"])),
     Option("--r-min", "Smallest distance to use, metres.", kind=click.FloatRange(min=0), metavar="METRES",
-           otherwise="the bandwidth for g, 0 for K"),
+           otherwise="half the bandwidth for g, 0 for K and L"),
     Option("--r-max", "Largest distance to use, metres.", kind=_POSITIVE, metavar="METRES",
            otherwise="curves: a quarter of the side of a square of equal area; fit: from a first fit"),
     Option("--exponent", "Power of the curve in the contrast, no unit.", kind=_POSITIVE, metavar="NUMBER",
-           otherwise="0.5 for g, 0.25 for K"),
+           otherwise="0.5 for g, 0.25 for K, 1 for L"),
+    Option("--distance-weight", "Each squared difference of the contrast counts its distance to this power.",
+           default=0.0, kind=float, metavar="NUMBER"),
+    Option("--level-simulations", "Patterns simulated to tell whether the second level of nested-thomas "
+                                  "earns its place: 0 to leave that open, or at least 19.",
+           default=99, kind=click.IntRange(min=0), metavar="COUNT"),
     Option("--bandwidth", "Half width of the kernel of g, metres.", kind=_POSITIVE, metavar="METRES",
            otherwise="0.15 mean spacings"),
     Option("--bootstrap", "Patterns simulated for the 95 % intervals: 0 for no intervals, or at least 39.",
@@ -136,7 +142,7 @@ _DECLARED = (
     Option("--count", "Number of patterns.", default=39, kind=click.IntRange(min=1), metavar="COUNT"),
     Option("--random", "Simulate complete randomness with the intensity of the survey instead of clusters."),
     Option("--parameter", "Value of a parameter of --model instead of a fit, once for each: "
-                          "parent_intensity per hectare, "
+                          "intensities per hectare, "
            "lengths in metres, mean_offspring in points per cluster.",
            kind=str, metavar="NAME=VALUE", many=True,
            default=(), otherwise="from a fit"),

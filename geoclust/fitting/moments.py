@@ -194,9 +194,10 @@ def fit_by_contrast(
 
     second: SecondLevel | None = None
     if len(kind.intensity_names) > 1 and level_simulations and p_value <= verdicts.TEST_LEVEL:
-        second = nesting_test(
-            survey, kind, found.contrast, choices, level_simulations, level_seed, workers, progress, intensity
-        )
+        second = second_level_of(
+            kind, found, survey.local_xy, survey.area, choices, level_simulations, level_seed, workers,
+            progress, intensity,
+        )  # fmt: skip
     refused = second is not None and second.p_value > verdicts.TEST_LEVEL
     draws = bootstrap_draws(
         found.fit.model, survey.area, fit_again, 0 if refused else bootstrap, boot_seed,
@@ -258,6 +259,30 @@ def nesting_test(
     return second_level_test(
         contrast, survey.local_xy, survey.area, measure, simulations, rng, workers=workers,
         progress=progress, intensity=intensity,
+    )  # fmt: skip
+
+
+def second_level_of(
+    kind: type[ClusterModel],
+    found: MomentFit,
+    local_xy: Floats,
+    area: StudyArea,
+    choices: ContrastChoices,
+    simulations: int,
+    rng: np.random.Generator,
+    workers: int | None = None,
+    progress: Progress | None = None,
+    intensity: Intensity | None = None,
+) -> SecondLevel:
+    """Test whether the second level of a nested fit earns its place, with curves measured as in the fit."""
+
+    def measure(points: Floats, r_max: float, again: Intensity | None) -> Contrast:
+        own = replace(choices, r_max=r_max)
+        return measured_contrast(kind, points, area, own, r_max, factors=factors_of(again))[0]
+
+    return second_level_test(
+        found.contrast, local_xy, area, measure, simulations, rng, workers=workers, progress=progress,
+        intensity=intensity,
     )  # fmt: skip
 
 

@@ -45,6 +45,11 @@ ADVICE: dict[str, tuple[str, ...]] = {
         "the "
         "area, analyse parts of it that are alike.",
     ),
+    "one-level": (
+        "Run it again with --model thomas: its clusters are what these points can tell.",
+        "A second level shows only where there are some tens of large clusters, each with several small "
+        "ones; if you expect that here, survey a larger area.",
+    ),
     "sigma-beyond-range": (
         "Survey a larger area, several times as wide as the clusters that you expect.",
         "If the density drifts across the area, with the terrain for instance, analyse parts of it that are "
@@ -148,6 +153,11 @@ def radius_holding(fit: ClusterFit, share: float) -> tuple[float, tuple[float, f
     limits = fit.intervals.get(model.scale_name)
     if limits is None:
         return radius, None
+    if any(p.above for p in model.described):
+        # lengths hang on a shape as well: the radius of each draw
+        rows = zip(*(fit.draws[p.name] for p in model.described), strict=True)
+        radii = [type(model)(*row).reach(1.0 - share) for row in rows]
+        return radius, (float(np.quantile(radii, 0.025)), float(np.quantile(radii, 0.975)))
     # all lengths of a kernel grow in proportion to its scale
     per_scale = radius / fit.parameters[model.scale_name]
     return radius, (per_scale * limits[0], per_scale * limits[1])
@@ -213,13 +223,27 @@ def _size(fit: ClusterFit) -> str:
     limits = fit.intervals.get(model.scale_name)
     of_points = fit.parameters["mean_offspring"]
     count_limits = fit.intervals.get("mean_offspring")
+    groups = _groups(fit)
     return (
-        f"Half of a cluster's points lie within **{words.number(half)} m** of its "
-        f"centre{_clause(half_limits, 'm')} and "
+        f"{groups}Half of a {'small ' if groups else ''}cluster's points lie within "
+        f"**{words.number(half)} m** of its centre{_clause(half_limits, 'm')} and "
         f"95 % within **{words.number(most)} m**{_clause(most_limits, 'm')}; the spread behind this, "
-        f"{model.scale_name.replace('_', ' ')}, is {words.number(scale)} m{_clause(limits, 'm')}. A cluster "
-        "holds "
+        f"{model.scale_name.replace('_', ' ')}, is {words.number(scale)} m{_clause(limits, 'm')}. A "
+        f"{'small ' if groups else ''}cluster holds "
         f"**{words.number(of_points, 2)}** points on average{_clause(count_limits, '')}."
+    )
+
+
+def _groups(fit: ClusterFit) -> str:
+    """What is to be said of the outer level of a nested process first."""
+    if len(fit.model.intensity_names) == 1:
+        return ""
+    outer, inner = (fit.parameters[name] for name in fit.model.intensity_names)
+    limits = fit.intervals.get("outer_sigma")
+    return (
+        f"Small clusters lie in groups: a group holds **{words.number(inner / outer, 2)}** of them on "
+        f"average, scattered round its centre with a standard deviation of "
+        f"**{words.number(fit.parameters['outer_sigma'])} m** per axis{_clause(limits, 'm')}. "
     )
 
 
@@ -228,10 +252,9 @@ def _clause(limits: tuple[float, float] | None, unit: str) -> str:
 
 
 def _count(survey: Survey, fit: ClusterFit, centres: CentreMap | None) -> str:
-    rho = words.per_hectare(fit.parameters["parent_intensity"])
-    limits = fit.intervals.get("parent_intensity")
-    shown = None if limits is None else (words.per_hectare(limits[0]), words.per_hectare(limits[1]))
-    text = f"There are **{words.number(rho)}** cluster centres per hectare{_clause(shown, '')}"
+    named = zip(fit.model.intensity_names, _levels(fit), strict=True)
+    found = ["{0} {2} per hectare{1}".format(*_per_hectare(fit, name), what) for name, what in named]
+    text = f"There are {words.listed(found)}"
     extent = area_text(survey.area.area)
     if centres is None:
         return f"{text} in the study area of {extent}."
@@ -240,6 +263,19 @@ def _count(survey: Survey, fit: ClusterFit, centres: CentreMap | None) -> str:
         f"{text}. In the study area of {extent} that makes **{words.whole(mean)}** centres "
         f"(95 % interval {words.counts_between(low, high)}{given(fit)})."
     )
+
+
+def _levels(fit: ClusterFit) -> tuple[str, ...]:
+    """What the centres of each level are called, outermost first."""
+    several = len(fit.model.intensity_names) > 1
+    return ("groups of clusters", "small clusters") if several else ("cluster centres",)
+
+
+def _per_hectare(fit: ClusterFit, name: str) -> tuple[str, str]:
+    """An intensity as bold text, and the clause of its interval."""
+    limits = fit.intervals.get(name)
+    shown = None if limits is None else (words.per_hectare(limits[0]), words.per_hectare(limits[1]))
+    return f"**{words.number(words.per_hectare(fit.parameters[name]))}**", _clause(shown, "")
 
 
 def given(fit: ClusterFit) -> str:
@@ -372,11 +408,15 @@ def _tiles(survey: Survey, fit: ClusterFit, centres: CentreMap | None) -> list[T
     def note(limits: tuple[float, float] | None, factor: float = 1.0) -> str:
         return "no interval" if limits is None else f"{words.between(factor * limits[0], factor * limits[1])}"
 
-    rho = words.per_hectare(fit.parameters["parent_intensity"])
     half, half_limits = radius_holding(fit, 0.5)
+    intensities = [
+        Tile(f"{what[0].upper()}{what[1:]} per hectare",
+             words.number(words.per_hectare(fit.parameters[name])), "ha⁻¹",
+             note(fit.intervals.get(name), words.HECTARE))
+        for name, what in zip(fit.model.intensity_names, _levels(fit), strict=True)
+    ]  # fmt: skip
     tiles = [
-        Tile("Cluster centres per hectare", words.number(rho), "ha⁻¹",
-             note(fit.intervals.get("parent_intensity"), words.HECTARE)),
+        *intensities,
         Tile("Half of a cluster lies within", words.number(half), "m", note(half_limits)),
         Tile("Points per cluster, mean", words.number(fit.parameters["mean_offspring"], 2), "",
              note(fit.intervals.get("mean_offspring"))),

@@ -138,6 +138,15 @@ _AGREE = Step(
     "Vehtari et al. 2021",
 )
 
+_SECOND_LEVEL = Step(
+    "Test of the second level",
+    "A second level always brings the model nearer to the curve. How much nearer by chance alone is seen in "
+    "patterns simulated from the best single level, to which both are fitted as well; simulation stops once "
+    "ten of them have reached the survey's drop of the contrast.",
+    (),
+    "Besag & Clifford 1991",
+)
+
 _FITS = {
     "minimum-contrast": _CONTRAST,
     "posterior": _POSTERIOR,
@@ -161,6 +170,25 @@ _MODELS: dict[str, tuple[str, tuple[str, ...]]] = {
             "λ = ρμ",
         ),
     ),
+    "nested-thomas": (
+        "Outer centres lie at random, ρ₁ per unit area; each has a Poisson number of inner centres, "
+        "scattered round it as a Gaussian with standard deviation σ₁ per axis; each of the inner centres, "
+        "ρ₂ per unit area in all, has a Poisson number of points with mean μ, scattered round it with σ₂.",
+        (
+            "g(r) = 1 + N(r; 2σ₂²)/ρ₂ + N(r; 2σ₁² + 2σ₂²)/ρ₁",
+            "N(r; v) = exp(−r²/2v) / 2πv",
+            "λ = ρ₂μ",
+        ),
+    ),
+    "variance-gamma": (
+        "Centres lie at random, ρ per unit area; each has a Poisson number of points with mean μ, scattered "
+        "round it as a Gaussian whose variance follows a gamma distribution of shape ν′ + 1.",
+        (
+            "g(r) = 1 + (r/η)^ν K_ν(r/η) / (π 2^(ν+1) η² Γ(ν + 1) ρ), ν = 2ν′ + 1",
+            "K(r) = πr² + (1 − (r/η)^(ν+1) K_(ν+1)(r/η) / (2^ν Γ(ν + 1))) / ρ",
+            "λ = ρμ",
+        ),
+    ),
 }
 _ANY_MODEL = (
     "Centres lie at random, ρ per unit area; each has a Poisson number of points with mean μ. The distance "
@@ -180,6 +208,8 @@ def steps(fit: ClusterFit | None, located: bool, covariates: bool = False) -> li
         out.append(Step(f"Model: {fit.model.name.replace('-', ' ')}", text, formulas, fit.model.source))
         if fit.method in _FITS:
             out.append(_FITS[fit.method])
+        if "second_level_p_value" in fit.choices:
+            out.append(_SECOND_LEVEL)
     if located:
         together = fit is not None and fit.sample is not None
         out += [_SAMPLED if together else _CENTRES, _CLUSTERS, _AGREE]
@@ -187,6 +217,7 @@ def steps(fit: ClusterFit | None, located: bool, covariates: bool = False) -> li
 
 
 REFERENCES: tuple[str, ...] = (
+    "Besag J, Clifford P (1991) Sequential Monte Carlo p-values. Biometrika 78: 301–304",
     "Baddeley A, Møller J, Waagepetersen R (2000) Non- and semi-parametric estimation of interaction in "
     "inhomogeneous point patterns. Statistica Neerlandica 54: 329–350",
     "Baddeley A, Coeurjolly J-F, Rubak E, Waagepetersen R (2014) Logistic regression for spatial Gibbs point "
@@ -211,6 +242,8 @@ REFERENCES: tuple[str, ...] = (
     "Guan Y (2007) A least-squares cross-validation bandwidth selection approach in pair correlation "
     "function "
     "estimations. Statistics and Probability Letters 77: 1722–1729",
+    "Jalilian A, Guan Y, Waagepetersen R (2013) Decomposition of variance for spatial Cox processes. "
+    "Scandinavian Journal of Statistics 40: 119–137",
     "Matérn B (1960) Spatial variation. Meddelanden från Statens Skogsforskningsinstitut 49 (5): 1–144",
     "Møller J, Waagepetersen RP (2004) Statistical inference and simulation for spatial point processes. "
     "Chapman & Hall",
@@ -220,6 +253,8 @@ REFERENCES: tuple[str, ...] = (
     "Ohser J (1983) On estimators for the reduced second moment measure of point processes. Mathematische "
     "Operationsforschung und Statistik, Series Statistics 14: 63–71",
     "Ripley BD (1977) Modelling spatial patterns. Journal of the Royal Statistical Society B 39: 172–212",
+    "Stoyan D, Stoyan H (1996) Estimating pair correlation functions of planar cluster processes. "
+    "Biometrical Journal 38: 259–271",
     "Stoyan D, Stoyan H (1994) Fractals, random shapes and point fields. Wiley",
     "Tanaka U, Ogata Y, Stoyan D (2008) Parameter estimation and model selection for Neyman-Scott point "
     "processes. Biometrical Journal 50: 43–57",

@@ -12,6 +12,7 @@ from jinja2 import Environment, PackageLoader, StrictUndefined
 from markupsafe import Markup, escape
 
 from geoclust.errors import OutputError
+from geoclust.fitting.contrast import LevelSurface
 from geoclust.fitting.pair_likelihoods import LikelihoodSurface
 from geoclust.layers.audit import area_text
 from geoclust.report import answer, canvas, effects, figures, fit_check, maps, method, tables, words
@@ -266,6 +267,13 @@ def _surface_words(fit: ClusterFit, ok: bool) -> tuple[str, str]:
             reading += "; the lines tell what other places lose in log-likelihood"
         alt = "Contour plot of the loss of likelihood over cluster centres per hectare and size of a cluster."
         return alt, reading + valley
+    if isinstance(fit.surface, LevelSurface):
+        reading += (
+            ", any other place inside the bold line fits the curve nearly as well (contrast up to 1.25 times "
+            "the least); for each pair of sizes the numbers of groups and of small clusters are those that "
+            "fit best"
+        )
+        return "Contour plot of the contrast over the size of groups and the size of small clusters.", reading
     reading += (
         ", any other place inside the bold line fits the curve nearly as well (contrast up to 1.25 times the "
         "least)" + valley

@@ -10,8 +10,8 @@ import numpy as np
 
 from geoclust.area.survey import Survey
 from geoclust.curves.curve import Curve
-from geoclust.curves.second_order import k_function, pair_correlation
-from geoclust.errors import CannotTell, InputError
+from geoclust.curves.second_order import k_function, l_function, pair_correlation
+from geoclust.errors import CannotTell, InputError, UsageError
 from geoclust.fitting.result import ClusterFit
 from geoclust.intensity.loglinear import LogLinearIntensity
 from geoclust.models.base import ClusterModel
@@ -50,7 +50,8 @@ def read_fit(path: str | Path, survey: Survey, intensity: LogLinearIntensity | N
     if not isinstance(choices, dict) or not isinstance(choices.get("r_max_m"), int | float):
         raise InputError(f"{path} does not say how the fit was made; make it again with geoclust fit.")
     curve = _curve(survey, choices, None if intensity is None else intensity.at_own_points())
-    fitted = model.pair_correlation(curve.radii) if curve.function == "g" else model.k_function(curve.radii)
+    of_model = {"g": model.pair_correlation, "K": model.k_function, "L": model.l_function}[curve.function]
+    fitted = of_model(curve.radii)
     return ClusterFit(
         model=model, intervals=intervals, status="ok", reason="", method=str(record["method"]),
         choices=choices, curve=curve, fitted=fitted, seed=record["seed"], intensity=intensity,
@@ -95,9 +96,12 @@ def _model(path: str | Path, record: dict[str, Any]) -> tuple[ClusterModel, dict
         }
     except (TypeError, KeyError, ValueError) as error:
         raise InputError(f"{path} has a parameter without a usable value; make the fit again.") from error
-    if not all(np.isfinite(v) and v > 0 for v in values.values()):
-        raise InputError(f"{path} has a parameter that is not positive; make the fit again.")
-    return kind(**values), intervals
+    try:
+        return kind(**values), intervals
+    except UsageError as error:
+        raise InputError(
+            f"{path} has a parameter that is not allowed ({error}); make the fit again."
+        ) from error
 
 
 def _same_covariates(path: str | Path, record: dict[str, Any], intensity: LogLinearIntensity | None) -> None:
@@ -114,10 +118,12 @@ def _same_covariates(path: str | Path, record: dict[str, Any], intensity: LogLin
 
 def _curve(survey: Survey, choices: dict[str, Any], intensity: np.ndarray | None) -> Curve:
     """The survey's curve over the range of the fit."""
-    g = choices.get("function", choices.get("pilot_function", "g")) == "g"
+    function = choices.get("function", choices.get("pilot_function", "g"))
+    g = function == "g"
     width = choices.get("bandwidth_m") if g else None
     radii = np.linspace(choices.get("r_min_m", width or 0.0), choices["r_max_m"], _RADII)
     radii = radii[radii > 0]
     if g:
         return pair_correlation(survey, radii, bandwidth=width, intensity_at_points=intensity)
-    return k_function(survey, radii, intensity_at_points=intensity)
+    measure = l_function if function == "L" else k_function
+    return measure(survey, radii, intensity_at_points=intensity)

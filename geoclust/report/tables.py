@@ -19,7 +19,11 @@ if TYPE_CHECKING:
     from geoclust.centres.result import CentreMap
     from geoclust.fitting.result import ClusterFit
 
-SYMBOLS = {"parent_intensity": "ρ", "sigma": "σ", "radius": "R", "mean_offspring": "μ"}
+SYMBOLS = {
+    "parent_intensity": "ρ", "sigma": "σ", "radius": "R", "mean_offspring": "μ", "outer_intensity": "ρ₁",
+    "outer_sigma": "σ₁", "inner_intensity": "ρ₂", "inner_sigma": "σ₂", "omega": "ω", "scale": "η",
+    "shape": "ν′",
+}  # fmt: skip
 _UNITS = {"1": "", "m⁻²": "m⁻²", "m": "m"}
 
 
@@ -133,6 +137,12 @@ _CHOICE_NAMES = {
     "acceptance": "moves accepted",
     "r_hat": "R̂",
     "margin_m": "centres looked for outside the study area, up to",
+    "distance_weight": "power of the distance that each difference counts",
+    "second_level_p_value": "p of the test of the second level against one",
+    "second_level_contrast_drop": "part of the contrast that the second level takes away",
+    "second_level_simulations": "patterns with one level drawn for that test",
+    "second_level_r_max_m": "largest distance of that test",
+    "one_level": "best single level of clusters",
     "clustering_p_value": "p of the one-sided test for clustering over the fitted range",
 }
 
@@ -156,10 +166,12 @@ def _spoken(key: str) -> str:
 
 
 def _shown(value: object, key: str) -> str:
-    unit = " m" if key.endswith("_m") or key in ("sigma", "scale") else ""
-    if key == "parent_intensity":
+    lengths = ("sigma", "scale", "outer_sigma", "inner_sigma")
+    unit = " m" if key.endswith("_m") or key in lengths else ""
+    per_area = key in ("parent_intensity", "outer_intensity", "inner_intensity")
+    if per_area:
         unit = " ha⁻¹"
-    factor = words.HECTARE if key == "parent_intensity" else 1.0
+    factor = words.HECTARE if per_area else 1.0
     if value is None:
         return "chosen by geoclust"
     if isinstance(value, bool | np.bool_):
