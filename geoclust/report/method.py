@@ -170,6 +170,16 @@ _MODELS: dict[str, tuple[str, tuple[str, ...]]] = {
             "λ = ρμ",
         ),
     ),
+    "cauchy": (
+        "Centres lie at random, ρ per unit area; each has a Poisson number of points with mean μ, half of "
+        "them within 1.73 ω of it but one in ten further out than 10 ω. Centres far outside the study area "
+        "therefore still send points into it: those beyond the margin that was sampled count by their mean.",
+        (
+            "g(r) = 1 + (1 + r²/4ω²)^(−3/2) / (8πω²ρ)",
+            "K(r) = πr² + (1 − (1 + r²/4ω²)^(−1/2)) / ρ",
+            "λ = ρμ",
+        ),
+    ),
     "nested-thomas": (
         "Outer centres lie at random, ρ₁ per unit area; each has a Poisson number of inner centres, "
         "scattered round it as a Gaussian with standard deviation σ₁ per axis; each of the inner centres, "
