@@ -3,11 +3,11 @@
 A nested process has two more parameters than a Thomas process and always comes nearer to the
 curve. How much nearer by chance alone is seen in patterns of the Thomas process that fits best: both are
 fitted to each of them, and the relative drop of the contrast from one level to two is compared with
-the survey's. Distances are those up to two and a half scales of each pattern's own best single level:
+the survey's. Distances are those up to four scales of each pattern's own best single level: much
 further out the curve hangs on where few large clusters happen to lie, a second level follows that as
-well, and it hides whether the inside of a cluster has parts. Simulation stops early once enough patterns
-have reached the survey's drop, which keeps the chance of a false alarm (Besag & Clifford 1991, Biometrika
-78: 301-304).
+well, and it hides whether the inside of a cluster has parts; much nearer, groups round the clusters
+cannot be seen. Simulation stops early once enough patterns have reached the survey's drop, which keeps
+the chance of a false alarm (Besag & Clifford 1991, Biometrika 78: 301-304).
 """
 
 from __future__ import annotations
@@ -31,8 +31,8 @@ Progress = Callable[[str, int, int], None]
 
 # range that the best single level is looked for in, and range of the test, in its scales; the least
 # range in bandwidths of g
-REACH_IN_SCALES = 5.0
-RANGE_IN_SCALES = 2.5
+REACH_IN_SCALES = 6.0
+RANGE_IN_SCALES = 4.0
 RANGE_IN_BANDWIDTHS = 6.0
 # patterns that have to reach the survey's drop before the rest are left out
 ENOUGH = 10
