@@ -118,11 +118,13 @@ class Search:
         The starts are followed on coarser classes, the best end then on all of them.
         """
         coarser = likelihood.coarser()
-        ends = [self._climb(coarser, start, 1e-3) for start in starts]
+        ends = [self._climb(coarser, start, 1e-2, 1e-2) for start in starts]
         theta, _ = max(ends, key=lambda end: end[1])
-        return self._climb(likelihood, theta, 1e-6)
+        return self._climb(likelihood, theta, 1e-6, 1e-7)
 
-    def _climb(self, likelihood: PairLikelihood, start: Floats, tolerance: float) -> tuple[Floats, float]:
+    def _climb(
+        self, likelihood: PairLikelihood, start: Floats, near: float, level: float
+    ) -> tuple[Floats, float]:
         def lost(theta: Floats) -> float:
             return -likelihood.of_model(self.model_at(theta)) if self.allowed(theta) else -NOTHING
 
@@ -130,9 +132,7 @@ class Search:
         step = np.diag(np.where(start + 0.1 < self.high, 0.1, -0.1))
         found = minimize(
             lost, start, method="Nelder-Mead", bounds=list(zip(self.low, self.high, strict=True)),
-            options={
-                "xatol": tolerance, "fatol": 1e-7, "initial_simplex": np.vstack([start, start + step])
-            },
+            options={"xatol": near, "fatol": level, "initial_simplex": np.vstack([start, start + step])},
         )  # fmt: skip
         return np.asarray(found.x), -float(found.fun)
 

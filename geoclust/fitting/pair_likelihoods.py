@@ -55,7 +55,7 @@ PALM, COMPOSITE = "palm", "composite-likelihood"
 CLASSES = 4096
 # radii at which the area round the points is computed, more of them round few points, whose errors do
 # not cancel; between them a spline in the root of the radius
-KNOTS, MOST_KNOTS, DISCS = 64, 512, 32_000
+KNOTS, MOST_KNOTS, DISCS = 64, 512, 16_000
 
 
 @dataclass(frozen=True, eq=False)
