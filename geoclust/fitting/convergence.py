@@ -21,7 +21,7 @@ KEPT = 500
 FIRST = 250
 # kernels evaluated in all before patience ends: a few minutes on two cores. Counted, not timed, so
 # that the same seed gives the same answer on any machine
-PATIENCE = 2e10
+PATIENCE = 1e10
 
 
 @dataclass(frozen=True, eq=False)

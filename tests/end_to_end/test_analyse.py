@@ -7,6 +7,7 @@ import signal
 import subprocess
 import sys
 import time
+from functools import partial
 from importlib import resources
 from pathlib import Path
 
@@ -23,6 +24,7 @@ from pyproj import CRS
 
 from geoclust.area.study_area import StudyArea
 from geoclust.cli.entry import run
+from geoclust.fitting import posterior
 from geoclust.models.patterns import draw_pattern
 from geoclust.models.thomas import Thomas
 
@@ -144,6 +146,23 @@ def test_raster_adds_up_to_the_number_of_centres(results):
     assert total == pytest.approx(zones["centres_mean"].sum(), rel=1e-4)
     assert total == pytest.approx(mean, rel=1e-4)
     assert values.mask.any(), "outside the L there is no value"
+
+
+def test_chains_that_disagree_give_way_to_a_contrast_fit(survey_file, tmp_path, monkeypatch):
+    """The folder is whole, the fit is by minimum contrast, and page, record and talk say why."""
+    monkeypatch.setattr(posterior, "sample_posterior", partial(posterior.sample_posterior, most_rounds=1))
+    monkeypatch.setattr(posterior, "HOPELESS_SIZE", 1e9)
+    out = tmp_path / "results"
+    assert run(["analyse", str(survey_file), str(survey_file), *LAYERS, "--out", str(out), *QUICK]) == 0
+    record = valid_record(out)
+    assert record["status"] == "ok"
+    assert record["method"] == "minimum-contrast"
+    assert "sigma" in record["choices"]["posterior_not_converged"]
+    assert record["parameters"]["sigma"]["value"] == pytest.approx(6.0, rel=0.3)
+    page = (out / "report.html").read_text("utf-8")
+    assert "The chains of the sampler still disagree" in page
+    assert "Its place is taken by a minimum contrast fit" in page
+    assert (out / "centre_intensity.tif").exists()
 
 
 @pytest.mark.parametrize(

@@ -125,6 +125,10 @@ def template_without_crs(d: Path) -> list[str]:
     return [*good(d), "--like", str(raster(d / "r.tif", crs=None))]
 
 
+def template_elsewhere(d: Path) -> list[str]:
+    return [*good(d), "--like", str(raster(d / "r.tif", x=WEST + 5000))]
+
+
 def template_and_cell(d: Path) -> list[str]:
     return [*good(d), "--like", str(raster(d / "r.tif")), "--cell", "5"]
 
@@ -161,6 +165,7 @@ CASES = {
     no_layer_at_all: (1, "notes.gpkg"),
     table_without_columns: (2, "--x-column"),
     template_without_crs: (1, "coordinate reference system"),
+    template_elsewhere: (2, "does not overlap"),
     template_and_cell: (2, "cell size"),
     zones_missing: (1, "zoens"),
     zones_of_points: (1, "polygon"),

@@ -18,9 +18,11 @@ from geoclust.area.survey import Survey
 from geoclust.curves.envelopes import global_envelope
 from geoclust.curves.second_order import SecondOrder, l_function
 from geoclust.errors import CannotTell, UsageError
-from geoclust.fitting import posterior, status
+from geoclust.fitting import convergence, posterior, status
+from geoclust.fitting.convergence import sample_until_converged
 from geoclust.fitting.fit import fit_clusters
 from geoclust.fitting.moments import ContrastChoices, fit_points
+from geoclust.fitting.sampling import ChainSetup
 from geoclust.models.patterns import draw_pattern
 from geoclust.models.thomas import Thomas
 
@@ -104,6 +106,19 @@ def test_chains_that_disagree_are_no_answer(monkeypatch):
     fit = fit_clusters(Survey(pattern.points + PLOT.origin, PLOT), rng=1)
     assert fit.status == "not-converged"
     assert "disagree" in fit.reason
+
+
+def test_patience_is_counted_in_kernels(monkeypatch):
+    """Without patience the third round is the last, whatever is still missing: no clock decides."""
+    monkeypatch.setattr(convergence, "PATIENCE", 0.0)
+    pattern = draw_pattern(Thomas(2e-4, 8.0, 6.0), PLOT, np.random.default_rng(6))
+    setup = ChainSetup(pattern.points, PLOT, Thomas(2e-4, 8.0, 6.0))
+    sample = sample_until_converged(setup, rng=np.random.default_rng(1), chains=2, enough=1e9)
+    assert not sample.converged
+    first = convergence.FIRST
+    lengths = [first, first + first // 2]
+    moves = int(max(4.0 * setup.start.parent_intensity * setup.wide.area, 100.0))
+    assert sample.moves == (lengths[1] + lengths[1] // 2) * moves
 
 
 def test_too_few_points_for_any_fit():
