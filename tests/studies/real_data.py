@@ -22,7 +22,6 @@ import numpy as np
 import pandas as pd
 import rasterio
 import shapely
-from pyproj import CRS
 from tables import machine, run_missing
 
 HERE = Path(__file__).parent
@@ -37,10 +36,7 @@ NAMES = {
 def box(folder: Path, width: float, height: float) -> str:
     """A rectangle as the study area, in a plane with no place on Earth."""
     path = folder / "area.gpkg"
-    plane = CRS.from_wkt(
-        'LOCAL_CS["plot",LOCAL_DATUM["plot",0],UNIT["metre",1],AXIS["x",EAST],AXIS["y",NORTH]]'
-    )
-    gpd.GeoDataFrame(geometry=[shapely.box(0, 0, width, height)], crs=plane).to_file(path, layer="area")
+    gpd.GeoDataFrame(geometry=[shapely.box(0, 0, width, height)]).to_file(path, layer="area")
     return str(path)
 
 
