@@ -122,4 +122,5 @@ def test_margin_of_a_heavy_tail_does_not_matter():
         a, b = (np.log(getattr(s.draws, name)) for s in (near, far))
         error = np.sqrt(a.var() / 150.0 + b.var() / 100.0)
         assert abs(a.mean() - b.mean()) < 3.5 * error, name
-    assert (far.draws.owner < 0).mean() < 0.7 * (near.draws.owner < 0).mean()
+    # fewer points have a centre beyond the wider margin
+    assert (far.draws.owner < 0).mean() < 0.9 * (near.draws.owner < 0).mean()
