@@ -117,7 +117,7 @@ def test_margin_of_a_heavy_tail_does_not_matter():
         pattern.points, PLOT, Wider(**TRUTHS["cauchy"].parameters), default_priors(len(pattern.points), PLOT),
         enough=100.0, rng=np.random.default_rng(24),
     )  # fmt: skip
-    assert far.setup.margin > 3 * near.setup.margin
+    assert far.setup.margin > 2.5 * near.setup.margin
     for name in ("parent_intensity", "scale", "mean_offspring", "number_inside"):
         a, b = (np.log(getattr(s.draws, name)) for s in (near, far))
         error = np.sqrt(a.var() / 150.0 + b.var() / 100.0)
