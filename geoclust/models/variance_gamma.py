@@ -144,9 +144,9 @@ def _quick_density(x: Floats, index: float) -> Floats:
 
 def _density(x: Floats, index: float) -> Floats:
     """x^index K_index(x) / (pi 2^(index + 1) Gamma(index + 1)), the density at distance x in scales."""
-    constant = np.exp(-gammaln(index + 1.0) - (index + 1.0) * np.log(2.0)) / np.pi
+    constant = -gammaln(index + 1.0) - (index + 1.0) * np.log(2.0) - np.log(np.pi)
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-        value = constant * np.exp(index * np.log(x) - x) * kve(index, x)
+        value = np.exp(constant + index * np.log(x) + _log_bessel(x, index))
     peak = 1.0 / (4.0 * np.pi * index) if index > 0 else np.inf
     # so near the centre that the Bessel function overflows, the density is that of the centre
     return np.asarray(np.where(np.isfinite(value) & (x > 0), value, peak))
@@ -156,5 +156,25 @@ def _log_beyond(x: Floats, index: float) -> Floats:
     """Logarithm of the share beyond x scales: x^a K_a(x) / (2^(a-1) Gamma(a)) with a = index + 1."""
     a = index + 1.0
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-        value = a * np.log(x) - x + np.log(kve(a, x)) - (a - 1.0) * np.log(2.0) - gammaln(a)
+        value = a * np.log(x) + _log_bessel(x, a) - (a - 1.0) * np.log(2.0) - gammaln(a)
     return np.asarray(np.where(np.isfinite(value), np.minimum(value, 0.0), np.where(x > 1.0, -np.inf, 0.0)))
+
+
+def _log_bessel(x: Floats, index: float) -> Floats:
+    """Logarithm of K_index(x); infinite where it overflows, near zero.
+
+    From index 30 on by the expansion for large orders (Abramowitz & Stegun 1964, 9.7.8), whose fifth
+    term is below 1e-7 there: the function itself would overflow far from zero.
+    """
+    if index < 30.0:
+        return np.asarray(np.log(kve(index, x)) - x)
+    root = np.sqrt(1.0 + (x / index) ** 2)
+    p = 1.0 / root
+    terms = (
+        (3 * p - 5 * p**3) / 24,
+        (81 * p**2 - 462 * p**4 + 385 * p**6) / 1152,
+        (30375 * p**3 - 369603 * p**5 + 765765 * p**7 - 425425 * p**9) / 414720,
+    )
+    series = 1.0 - terms[0] / index + terms[1] / index**2 - terms[2] / index**3
+    decay = index * (root + np.log(x / index / (1.0 + root)))
+    return np.asarray(0.5 * np.log(0.5 * np.pi / index) - decay - 0.5 * np.log(root) + np.log(series))
