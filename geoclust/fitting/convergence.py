@@ -77,6 +77,7 @@ def sample_until_converged(
     every: int = 50,
     most_rounds: int = 11,
     enough: float = ENOUGH,
+    leave: Callable[[Sample], bool] | None = None,
     workers: int | None = None,
     progress: Progress | None = None,
 ) -> Sample:
@@ -97,6 +98,8 @@ def sample_until_converged(
         very many points.
     enough
         Effective sample size to reach for every quantity.
+    leave
+        Asked at each look whether to stop, because the sample will not be used.
     """
     seeds = rng.spawn(2)
     expected = setup.start.parent_intensity * setup.wide.area
@@ -112,7 +115,7 @@ def sample_until_converged(
     for k in range(1, most_rounds):
         more = len(running[0].records) // 2
         after = chains * (moves + more * moves_per_draw) * a_move
-        if sample.converged or (k > 2 and after > PATIENCE):
+        if sample.converged or (k > 2 and after > PATIENCE) or (leave is not None and leave(sample)):
             break
         extend(
             running, draws=more, moves_per_draw=moves_per_draw, every=every, workers=workers,

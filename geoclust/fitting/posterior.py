@@ -21,6 +21,7 @@ from geoclust.fitting.moments import (
 )
 from geoclust.fitting.result import ClusterFit
 from geoclust.fitting.sampling import ChainSetup, Priors
+from geoclust.fitting.shares import heavy_tailed
 from geoclust.intensity.base import Intensity
 from geoclust.models.base import ClusterModel
 
@@ -28,6 +29,9 @@ Progress = Callable[[str, int, int], None]
 
 # the table of shares, and with it the prior, first spans this factor on both sides of the pilot's scale
 TABLE_FACTOR = 1.8
+# a scale this many times the one that the margin was set by makes the margin too narrow; with a
+# heavy tail, what lies beyond it counts by its mean
+OUTGROWN, OUTGROWN_HEAVY = 1.4, 2.0
 # worse than this after all rounds is no answer
 HOPELESS_R_HAT, HOPELESS_SIZE = 1.1, 50.0
 
@@ -128,6 +132,7 @@ def sample_posterior(
     """
     low, high = priors.scale_bounds
     factor = TABLE_FACTOR
+    room = OUTGROWN_HEAVY if heavy_tailed(type(start)) else OUTGROWN
     # the furthest that a centre may lie depends on the scale, but has to stay fixed while it is sampled
     margin = type(start).margin_in_scales * start.scale
     for attempt, seed in enumerate(rng.spawn(3)):
@@ -139,17 +144,23 @@ def sample_posterior(
             local_xy, area, start, priors=cut, margin=margin, workers=workers, intensity=intensity
         )
         every = int(max(50, start.parent_intensity * setup.wide.area))
+
+        def cramped(found: Sample, bounds: tuple[float, float] = bounds) -> bool:
+            at = found.draws.scale
+            return (bounds[0] > low and float(at.min()) < bounds[0] * 1.1) or (
+                bounds[1] < high and float(at.max()) > bounds[1] / 1.1
+            )
+
+        def outgrown(found: Sample, most: float = room * start.scale) -> bool:
+            return cramped(found) or float(np.median(found.draws.scale)) > most
+
         sample = sample_until_converged(
             setup, rng=seed, chains=chains, every=every, enough=enough, most_rounds=most_rounds,
-            workers=workers, progress=progress,
+            leave=outgrown if attempt < 2 else None, workers=workers, progress=progress,
         )  # fmt: skip
-        lowest, highest = float(sample.draws.scale.min()), float(sample.draws.scale.max())
-        cramped = (lowest < bounds[0] * 1.1 and bounds[0] > low) or (
-            highest > bounds[1] / 1.1 and bounds[1] < high
-        )
-        middle = float(np.median(sample.draws.scale))
-        if attempt == 2 or not (cramped or middle > 1.4 * start.scale):
+        if attempt == 2 or not outgrown(sample):
             break
+        middle = float(np.median(sample.draws.scale))
         # begin again from what was found
         start = type(start).of(
             float(np.median(sample.draws.parent_intensity)),
@@ -157,7 +168,7 @@ def sample_posterior(
             float(np.median(sample.draws.mean_offspring)),
         )
         margin = type(start).margin_in_scales * middle
-        factor *= 1.5 if cramped else 1.0
+        factor *= 1.5 if cramped(sample) else 1.0
     return sample
 
 
