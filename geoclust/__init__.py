@@ -23,6 +23,7 @@ if TYPE_CHECKING:
     from geoclust.curves.second_order import k_function, l_function, pair_correlation
     from geoclust.errors import CannotTell, GeoclustError, InputError, OutputError, UsageError
     from geoclust.fitting.assessment import Assessment, assess_fit
+    from geoclust.fitting.choosing import ModelComparison, compare_models
     from geoclust.fitting.fit import fit_clusters
     from geoclust.fitting.result import ClusterFit
     from geoclust.intensity.covariates import DistanceCovariate, RasterCovariate, coordinate_covariates
@@ -30,8 +31,11 @@ if TYPE_CHECKING:
     from geoclust.intensity.kernel import KernelIntensity, kernel_intensity
     from geoclust.intensity.loglinear import LogLinearIntensity, fit_intensity
     from geoclust.layers.survey_layers import audit_survey
+    from geoclust.models.cauchy import Cauchy
     from geoclust.models.matern_cluster import MaternCluster
+    from geoclust.models.nested_thomas import NestedThomas
     from geoclust.models.thomas import Thomas
+    from geoclust.models.variance_gamma import VarianceGamma
     from geoclust.simulation.patterns import simulate_patterns
     from geoclust.terrain import read_covariates
     from geoclust.workflow import analyse, read_survey
@@ -62,11 +66,16 @@ _HOMES = {
     "UsageError": "geoclust.errors",
     "Assessment": "geoclust.fitting.assessment",
     "assess_fit": "geoclust.fitting.assessment",
+    "ModelComparison": "geoclust.fitting.choosing",
+    "compare_models": "geoclust.fitting.choosing",
     "fit_clusters": "geoclust.fitting.fit",
     "ClusterFit": "geoclust.fitting.result",
     "audit_survey": "geoclust.layers.survey_layers",
+    "Cauchy": "geoclust.models.cauchy",
     "MaternCluster": "geoclust.models.matern_cluster",
+    "NestedThomas": "geoclust.models.nested_thomas",
     "Thomas": "geoclust.models.thomas",
+    "VarianceGamma": "geoclust.models.variance_gamma",
     "simulate_patterns": "geoclust.simulation.patterns",
     "fit_intensity": "geoclust.intensity.loglinear",
     "LogLinearIntensity": "geoclust.intensity.loglinear",
@@ -85,6 +94,7 @@ _HOMES = {
 __all__ = [
     "Assessment",
     "CannotTell",
+    "Cauchy",
     "CentreMap",
     "ClusterFit",
     "Curve",
@@ -94,6 +104,8 @@ __all__ = [
     "KernelIntensity",
     "LogLinearIntensity",
     "MaternCluster",
+    "ModelComparison",
+    "NestedThomas",
     "OutputError",
     "RasterCovariate",
     "StudyArea",
@@ -105,6 +117,7 @@ __all__ = [
     "assess_fit",
     "audit_survey",
     "clark_evans_test",
+    "compare_models",
     "coordinate_covariates",
     "cross_validated_bandwidth",
     "dispersion",
