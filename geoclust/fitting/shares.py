@@ -164,10 +164,12 @@ def far_densities(
     # scattered parts: the grid spans them all
     side = max(area.area / PARTS, (maxx - minx) * (maxy - miny) / (1_000 * PARTS))
     cells = Cells.square(area, float(np.sqrt(side)))
-    nodes = cells.places(2).reshape(-1, 2) - wide.origin
-    weights = np.repeat(cells.areas / 4.0, 4)
+    places, held = cells.places(2), cells.places_inside(2)
+    nodes = places[held] - wide.origin
+    weights = np.repeat(cells.areas / held.sum(axis=1), held.sum(axis=1))
     if intensity is not None:
-        weights = weights * intensity.at(nodes + wide.origin) / intensity.mean
+        inside = area.contains(nodes + wide.origin)
+        weights[inside] *= intensity.relative(nodes[inside] + wide.origin - area.origin)
     here = at + (area.origin - wide.origin)
     densities, shares = np.empty((levels, len(at))), np.empty((levels, 1))
     for level in range(levels):
