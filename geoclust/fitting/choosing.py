@@ -185,7 +185,11 @@ def compare_models(
     UsageError
         If an argument is not allowed.
     """
-    kinds = _checked(models, tiles, folds)
+    kinds = comparable(models)
+    if tiles is not None and tiles < 8:
+        raise not_allowed("tiles", "at least 8", tiles)
+    if folds < 2:
+        raise not_allowed("folds", "at least 2", folds)
     seeds = np.random.default_rng(rng).spawn(len(kinds))
     starts = [_start(survey, kind) for kind in kinds]
     count = _tile_count(survey, starts) if tiles is None else tiles
@@ -216,7 +220,8 @@ def compare_models(
     return ModelComparison(names, np.column_stack(columns), np.column_stack(errors), cut)
 
 
-def _checked(models: Sequence[str], tiles: int | None, folds: int) -> list[type[ClusterModel]]:
+def comparable(models: Sequence[str]) -> list[type[ClusterModel]]:
+    """The models to compare, complete randomness left out, or one sentence on why they cannot be."""
     if isinstance(models, str) or len(set(models)) != len(models):
         raise not_allowed("models", "a list of different names", models)
     kinds = [model_by_name(name) for name in models if name != RANDOM]
@@ -228,10 +233,6 @@ def _checked(models: Sequence[str], tiles: int | None, folds: int) -> list[type[
                 f"The model {kind.name} cannot be compared, as held-out ground cannot be predicted with it; "
                 "compare models such as thomas and matern-cluster."
             )
-    if tiles is not None and tiles < 8:
-        raise not_allowed("tiles", "at least 8", tiles)
-    if folds < 2:
-        raise not_allowed("folds", "at least 2", folds)
     return kinds
 
 

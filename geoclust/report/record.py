@@ -15,6 +15,7 @@ from geoclust.centres.result import CentreMap
 from geoclust.curves.envelopes import EnvelopeTest
 from geoclust.errors import OutputError
 from geoclust.fitting.assessment import Assessment
+from geoclust.fitting.choosing import ModelComparison
 from geoclust.fitting.result import ClusterFit
 from geoclust.intensity.loglinear import LogLinearIntensity
 from geoclust.layers.audit import Audit
@@ -127,6 +128,11 @@ def add_terrain(
 def add_assessment(record: dict[str, Any], found: Assessment) -> None:
     """Add whether the fitted model reproduces the survey to the content of fit.json."""
     record["assessment"] = plain(found.record())
+
+
+def add_comparison(record: dict[str, Any], found: ModelComparison) -> None:
+    """Add how well models predict held-out ground to the content of fit.json."""
+    record["comparison"] = plain(found.record())
 
 
 def _test(test: EnvelopeTest) -> dict[str, object]:

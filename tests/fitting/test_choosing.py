@@ -185,7 +185,7 @@ def test_differences_come_with_the_error_of_pairs():
     assert error == pytest.approx(np.sqrt(8) * np.sqrt(8 / 7))
     assert comparison.best == "thomas"
     assert comparison.sentences() == [
-        "thomas predicts held-out ground better than complete randomness "
+        "Held-out ground is predicted better by thomas than by complete randomness "
         "(log score 16.0 apart, standard error 3.0)."
     ]
     unsure = made_up([-3, 4] * 4)
