@@ -9,6 +9,7 @@ import numpy as np
 import numpy.typing as npt
 
 from geoclust.area.study_area import StudyArea
+from geoclust.area.survey import Survey
 from geoclust.curves._pairs import cell_order
 from geoclust.fitting import _chain, _kernels, _moves
 from geoclust.fitting._table import sum_of_shares
@@ -71,7 +72,8 @@ class Draws:
     centres
         Per chain and draw, (k, 2) local coordinates, those outside included.
     owner
-        (c, m, n) row of the centre of each point, -1 for background.
+        (c, m, n) row of the centre of each point; -1 for background and, with a heavy tail, for
+        centres outside the widened study area.
     acceptance
         Share of tries accepted, by move.
     """
@@ -144,6 +146,11 @@ class ChainSetup:
     def n(self) -> int:
         """Number of points."""
         return len(self.data.x)
+
+    def holds(self, survey: Survey) -> bool:
+        """Whether these chains are of this survey."""
+        same = self.area is survey.area or self.area.polygon.equals(survey.area.polygon)
+        return same and self.n == survey.n
 
 
 class Chain:

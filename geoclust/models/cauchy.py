@@ -51,7 +51,7 @@ class Cauchy(ClusterModel):
     kernel_code: ClassVar[int] = 2
     # the kernel is cut nowhere: this is further than any study area reaches
     reach_in_scales: ClassVar[float] = 1e6
-    # centres further out count by their mean; see `fitting/heavy_tails.py`
+    # centres further out count by their mean; see `far_densities` in `fitting/shares.py`
     margin_in_scales: ClassVar[float] = 8.0
 
     def offspring_density(self, r: npt.ArrayLike) -> Floats:

@@ -42,7 +42,8 @@ def stream_patterns(
     source
         A fit, a model, or a number: the intensity per m² of complete randomness.
     area
-        Where; offspring of centres outside it are included, save for fewer than 1e-9 points expected.
+        Where; offspring of centres outside it are included: all with a heavy tail, otherwise save for
+        fewer than 1e-9 points expected.
     count
         Number of patterns.
     rng
