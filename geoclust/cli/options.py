@@ -100,6 +100,12 @@ _DECLARED = (
     Option("--covariate", "Raster that may explain where points are, such as elevation; each band is one. "
                           "May be repeated. Clusters are then those beyond it.",
            kind=_PATH, metavar="RASTER", many=True, default=(), otherwise="none"),
+    Option("--plot-column", "Column of both layers that names the plot of each feature: plots are "
+                            "replicates, pooled with common parameters.",
+           kind=str, metavar="NAME", otherwise="one survey"),
+    Option("--group-column", "Column of the study area that names the group of each plot: every group is "
+                             "fitted by itself, and they are compared.",
+           kind=str, metavar="NAME", otherwise="no groups"),
     # the maps
     Option("--like", "Template raster: the maps follow its grid. Not together with --cell.", kind=_PATH,
            metavar="RASTER", otherwise="none"),
@@ -127,7 +133,7 @@ _DECLARED = (
     Option("--distance-weight", "Each squared difference of the contrast counts its distance to this power.",
            default=0.0, kind=float, metavar="NUMBER"),
     Option("--level-simulations", "Patterns simulated to tell whether the second level of nested-thomas "
-                                  "earns its place: 0 to leave that open, or at least 19.",
+                                  "earns its place: 0 to leave that open, or at least 39.",
            default=99, kind=click.IntRange(min=0), metavar="COUNT"),
     Option("--bandwidth", "Half width of the kernel of g, metres.", kind=_POSITIVE, metavar="METRES",
            otherwise="0.15 mean spacings"),
@@ -135,6 +141,9 @@ _DECLARED = (
            default=199, kind=click.IntRange(min=0), metavar="COUNT"),
     Option("--assess", "Test whether the fitted model reproduces the distances to the next point, on which "
                        "it was not fitted."),
+    Option("--against", "Model to compare with by how well held-out ground is predicted, beside complete "
+                        "randomness. May be repeated.", kind=str, metavar="NAME", many=True, default=(),
+           otherwise="no comparison"),
     Option("--fit", "Fit to take over, written by `geoclust fit --out` or `geoclust analyse` "
                     "(fit.json).", kind=_PATH,
            metavar="FILE", otherwise="a fit is made now"),

@@ -16,6 +16,7 @@ from geoclust.fitting.result import ClusterFit
 from geoclust.intensity.base import Intensity
 from geoclust.models.base import ClusterModel
 from geoclust.models.catalogue import SAMPLED, model_by_name
+from geoclust.models.cauchy import Cauchy
 
 Progress = Callable[[str, int, int], None]
 
@@ -69,7 +70,7 @@ def fit_clusters(
         Each squared difference of the contrast counts its distance to this power; 0 for all alike.
     level_simulations
         Patterns with one level of clusters that tell whether the second level of ``nested-thomas``
-        earns its place; 0 to leave that open, otherwise at least 19.
+        earns its place; 0 to leave that open, otherwise at least 39.
     bootstrap
         Patterns simulated for the intervals of all but the posterior; 0 for none, otherwise at least
         39.
@@ -99,8 +100,15 @@ def fit_clusters(
     """
     kind = model_by_name(model)
     method = method_for(kind, method)
-    if level_simulations != 0 and level_simulations < 19:
-        raise not_allowed("level_simulations", "0 or at least 19", level_simulations)
+    if survey.area.plots > 1 and intensity is not None:
+        raise UsageError("Plots laid side by side have no place among covariates; leave out one of the two.")
+    if survey.area.plots > 1 and kind is Cauchy:
+        raise UsageError(
+            "The clusters of the model cauchy have no end and would reach from plot to plot; take another "
+            "model for pooled plots, such as thomas."
+        )
+    if level_simulations != 0 and level_simulations < 39:
+        raise not_allowed("level_simulations", "0 or at least 39", level_simulations)
     if bootstrap != 0 and bootstrap < 39:
         raise not_allowed("bootstrap", "0 or at least 39", bootstrap)
     if chains < 2:

@@ -3,11 +3,12 @@
 A nested process has two more parameters than a Thomas process and always comes nearer to the
 curve. How much nearer by chance alone is seen in patterns of the Thomas process that fits best: both are
 fitted to each of them, and the relative drop of the contrast from one level to two is compared with
-the survey's. Distances are those up to four scales of each pattern's own best single level: much
-further out the curve hangs on where few large clusters happen to lie, a second level follows that as
-well, and it hides whether the inside of a cluster has parts; much nearer, groups round the clusters
-cannot be seen. Simulation stops early once enough patterns have reached the survey's drop, which keeps
-the chance of a false alarm (Besag & Clifford 1991, Biometrika 78: 301-304).
+the survey's. That is done over two ranges, in scales of each pattern's own best single level. The short
+one tells whether a cluster has parts: further out the curve hangs on where few large clusters happen to
+lie, and a second level follows that as well. The long one tells whether clusters lie in groups. The
+p-value is twice the smaller of the two (Bonferroni). Simulation stops early once enough patterns have
+reached the survey's drops, which keeps the chance of a false alarm (Besag & Clifford 1991, Biometrika 78:
+301-304).
 """
 
 from __future__ import annotations
@@ -29,12 +30,12 @@ from geoclust.workers import in_order
 Floats = npt.NDArray[np.float64]
 Progress = Callable[[str, int, int], None]
 
-# range that the best single level is looked for in, and range of the test, in its scales; the least
+# both ranges in scales of the best single level, the range that this is looked for in, and the least
 # range in bandwidths of g
-REACH_IN_SCALES = 6.0
-RANGE_IN_SCALES = 4.0
+RANGES_IN_SCALES = (4.0, 10.0)
+REACH_IN_SCALES = 12.0
 RANGE_IN_BANDWIDTHS = 6.0
-# patterns that have to reach the survey's drop before the rest are left out
+# patterns that have to reach a drop of the survey before the rest are left out
 ENOUGH = 10
 
 
@@ -44,45 +45,50 @@ class SecondLevel:
 
     Attributes
     ----------
-    drop
-        Part of the contrast of the best single level that the second one takes away.
+    drops
+        Part of the contrast of the best single level that the second one takes away, over each range.
     p_value
-        Chance of such a drop in patterns with a single level.
+        Chance of such drops in patterns with a single level.
     simulations
         Patterns that were drawn.
     single
         The best single level.
-    r_max
-        Largest distance of the test, metres.
+    ranges
+        Largest distance of each range, metres.
     """
 
-    drop: float
+    drops: tuple[float, ...]
     p_value: float
     simulations: int
     single: OneLevel
-    r_max: float
+    ranges: tuple[float, ...]
 
     def record(self) -> dict[str, object]:
         """The test among the choices of a fit."""
         return {
             "second_level_p_value": self.p_value,
-            "second_level_contrast_drop": self.drop,
+            "second_level_contrast_drops": list(self.drops),
+            "second_level_ranges_m": list(self.ranges),
             "second_level_simulations": self.simulations,
-            "second_level_r_max_m": self.r_max,
             "one_level": {"parent_intensity": self.single.parent_intensity, "sigma": self.single.scale},
         }
 
 
-def drop_of(contrast: Contrast, intensity: float, area: float) -> tuple[float, OneLevel, float]:
-    """Relative drop of the contrast from one level to two, the single level, and the range of the drop."""
+def drops_of(
+    contrast: Contrast, intensity: float, area: float
+) -> tuple[tuple[float, ...], OneLevel, tuple[float, ...]]:
+    """Relative drop of the contrast from one level to two over both ranges, the single level, the ranges."""
     limits = Limits.of(contrast, intensity, area)
     single = best_single_level(contrast, limits, CurvesByScale(contrast, limits))
-    r_max = _reach(contrast, RANGE_IN_SCALES * single.scale)
-    near = contrast.up_to(r_max)
-    limits = Limits.of(near, intensity, area)
-    curves = CurvesByScale(near, limits)
-    one, two = best_single_level(near, limits, curves), search_two_levels(near, limits, curves)
-    return 1.0 - two.value / one.value, single, r_max
+    drops, ranges = [], []
+    for scales in RANGES_IN_SCALES:
+        near = contrast.up_to(_reach(contrast, scales * single.scale))
+        limits = Limits.of(near, intensity, area)
+        curves = CurvesByScale(near, limits)
+        one, two = best_single_level(near, limits, curves), search_two_levels(near, limits, curves)
+        drops.append(1.0 - two.value / one.value)
+        ranges.append(float(near.radii[-1]))
+    return tuple(drops), single, tuple(ranges)
 
 
 def _reach(contrast: Contrast, distance: float) -> float:
@@ -129,22 +135,27 @@ def second_level_test(
     limits = Limits.of(contrast, density, area.area)
     first = best_single_level(contrast, limits, CurvesByScale(contrast, limits))
     reach = _reach(contrast, REACH_IN_SCALES * first.scale)
-    drop, single, r_max = drop_of(measure(local_xy, reach, intensity), density, area.area)
+    drops, single, ranges = drops_of(measure(local_xy, reach, intensity), density, area.area)
     model = Thomas(single.parent_intensity, single.scale, density / single.parent_intensity)
 
-    def one(seed: np.random.Generator) -> float:
+    def one(seed: np.random.Generator) -> tuple[float, ...]:
         points = draw_pattern(model, area, seed, intensity).points
         if len(points) < 2:
-            return 1.0
+            return (1.0,) * len(drops)
         again = None if intensity is None else intensity.refit(points, seed)
-        return drop_of(measure(points, reach, again), len(points) / area.area, area.area)[0]
+        return drops_of(measure(points, reach, again), len(points) / area.area, area.area)[0]
 
-    reached = done = 0
-    for value in in_order(one, rng.spawn(simulations), workers):
+    reached, done = [0] * len(drops), 0
+    p_values = [1.0] * len(drops)
+    for found in in_order(one, rng.spawn(simulations), workers):
         done += 1
-        reached += value >= drop
+        for k, (value, own) in enumerate(zip(found, drops, strict=True)):
+            # each range stops by itself
+            if reached[k] < ENOUGH:
+                reached[k] += value >= own
+                p_values[k] = reached[k] / done if reached[k] == ENOUGH else (1 + reached[k]) / (1 + done)
         if progress is not None:
             progress("test of the second level", done, simulations)
-        if reached == ENOUGH:
-            return SecondLevel(drop, reached / done, done, single, r_max)
-    return SecondLevel(drop, (1 + reached) / (1 + done), done, single, r_max)
+        if min(reached) == ENOUGH:
+            break
+    return SecondLevel(drops, min(1.0, len(drops) * min(p_values)), done, single, ranges)

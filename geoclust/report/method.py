@@ -141,8 +141,9 @@ _AGREE = Step(
 _SECOND_LEVEL = Step(
     "Test of the second level",
     "A second level always brings the model nearer to the curve. How much nearer by chance alone is seen in "
-    "patterns simulated from the best single level, to which both are fitted as well; simulation stops once "
-    "ten of them have reached the survey's drop of the contrast.",
+    "patterns simulated from the best single level, to which both are fitted as well, over a short range "
+    "(has a cluster parts?) and a long one (do clusters lie in groups?); simulation stops once ten of them "
+    "have reached the survey's drop of the contrast over each.",
     (),
     "Besag & Clifford 1991",
 )

@@ -139,9 +139,9 @@ _CHOICE_NAMES = {
     "margin_m": "centres looked for outside the study area, up to",
     "distance_weight": "power of the distance that each difference counts",
     "second_level_p_value": "p of the test of the second level against one",
-    "second_level_contrast_drop": "part of the contrast that the second level takes away",
+    "second_level_contrast_drops": "parts of the contrast that the second level takes away, over both ranges",
     "second_level_simulations": "patterns with one level drawn for that test",
-    "second_level_r_max_m": "largest distance of that test",
+    "second_level_ranges_m": "largest distances of that test",
     "one_level": "best single level of clusters",
     "clustering_p_value": "p of the one-sided test for clustering over the fitted range",
 }

@@ -52,7 +52,8 @@ def one_survey(truth: ClusterModel, number: int, area: gc.StudyArea, simulations
     )  # fmt: skip
     earned = second.p_value <= TEST_LEVEL
     return {
-        "points": len(points), "p_value": second.p_value, "drop": second.drop,
+        "points": len(points), "p_value": second.p_value, "drop_near": second.drops[0],
+        "drop_far": second.drops[1],
         "simulations": second.simulations, "earned": int(earned), "ok": int(earned and status == "ok"),
         **found.fit.model.parameters,
     }  # fmt: skip
