@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING, Any
 from geoclust.version import __version__
 
 if TYPE_CHECKING:
+    from geoclust.area.plots import pool_surveys
     from geoclust.area.study_area import StudyArea
     from geoclust.area.survey import Survey
     from geoclust.centres.locate import locate_centres
@@ -25,6 +26,7 @@ if TYPE_CHECKING:
     from geoclust.fitting.assessment import Assessment, assess_fit
     from geoclust.fitting.choosing import ModelComparison, compare_models
     from geoclust.fitting.fit import fit_clusters
+    from geoclust.fitting.groups import GroupComparison, compare_groups
     from geoclust.fitting.result import ClusterFit
     from geoclust.intensity.covariates import DistanceCovariate, RasterCovariate, coordinate_covariates
     from geoclust.intensity.envelopes import inhomogeneous_envelopes
@@ -36,12 +38,18 @@ if TYPE_CHECKING:
     from geoclust.models.nested_thomas import NestedThomas
     from geoclust.models.thomas import Thomas
     from geoclust.models.variance_gamma import VarianceGamma
+    from geoclust.replicates import Plots, read_plots
     from geoclust.simulation.patterns import simulate_patterns
     from geoclust.terrain import read_covariates
     from geoclust.workflow import analyse, read_survey
 
 # loaded when they are first used: `geoclust --help` need not wait for compilers and geometry
 _HOMES = {
+    "pool_surveys": "geoclust.area.plots",
+    "GroupComparison": "geoclust.fitting.groups",
+    "compare_groups": "geoclust.fitting.groups",
+    "Plots": "geoclust.replicates",
+    "read_plots": "geoclust.replicates",
     "StudyArea": "geoclust.area.study_area",
     "Survey": "geoclust.area.survey",
     "locate_centres": "geoclust.centres.locate",
@@ -100,6 +108,7 @@ __all__ = [
     "Curve",
     "DistanceCovariate",
     "GeoclustError",
+    "GroupComparison",
     "InputError",
     "KernelIntensity",
     "LogLinearIntensity",
@@ -107,16 +116,19 @@ __all__ = [
     "ModelComparison",
     "NestedThomas",
     "OutputError",
+    "Plots",
     "RasterCovariate",
     "StudyArea",
     "Survey",
     "Thomas",
     "UsageError",
+    "VarianceGamma",
     "__version__",
     "analyse",
     "assess_fit",
     "audit_survey",
     "clark_evans_test",
+    "compare_groups",
     "compare_models",
     "coordinate_covariates",
     "cross_validated_bandwidth",
@@ -134,9 +146,11 @@ __all__ = [
     "loosmore_ford_test",
     "nearest_neighbour_function",
     "pair_correlation",
+    "pool_surveys",
     "quadrat_test",
     "randomness_envelopes",
     "read_covariates",
+    "read_plots",
     "read_survey",
     "simulate_patterns",
 ]

@@ -40,6 +40,9 @@ class StudyArea:
     crs
         Coordinate reference system, anything that pyproj understands; it must be
         projected in metres if it is given.
+    plots
+        Number of separate plots that the polygon holds, laid side by side (`pool_surveys`); what
+        follows from the size of a study area then follows from that of one plot.
 
     Raises
     ------
@@ -57,7 +60,10 @@ class StudyArea:
     [0.25, 1.0]
     """
 
-    def __init__(self, polygon: shapely.Polygon | shapely.MultiPolygon, crs: object = None) -> None:
+    def __init__(
+        self, polygon: shapely.Polygon | shapely.MultiPolygon, crs: object = None, *, plots: int = 1
+    ) -> None:
+        self.plots = plots
         self.polygon = checked_polygon(polygon)
         self.crs = checked_crs(crs)
         rings = [ring for part in self.polygon.geoms for ring in (part.exterior, *part.interiors)]
@@ -95,6 +101,11 @@ class StudyArea:
     def bounds(self) -> tuple[float, float, float, float]:
         """Smallest easting and northing, largest easting and northing, in metres."""
         return tuple(float(v) for v in self.polygon.bounds)  # type: ignore[return-value]
+
+    @property
+    def side(self) -> float:
+        """Side of the square of equal area in metres; of one plot on average, if there are several."""
+        return float(np.sqrt(self.area / self.plots))
 
     @property
     def edges(self) -> int:

@@ -41,8 +41,8 @@ def locate_centres(
     it. Births, deaths, displacements, splits and merges of centres are accepted
     so that the chain visits configurations in proportion to their posterior
     probability (van Lieshout & Baddeley 2002; Møller & Waagepetersen 2004). If the
-    fit is itself a posterior sample, its centres are used, so that the map carries
-    the uncertainty of the parameters too; otherwise they are taken as known.
+    fit is itself a posterior sample of this survey, its centres are used, so that the map
+    carries the uncertainty of the parameters too; otherwise they are taken as known.
 
     Parameters
     ----------
@@ -85,6 +85,11 @@ def locate_centres(
     if chains < 2:
         raise not_allowed("chains", "at least 2, so that they can be compared", chains)
     area = survey.area
+    if area.plots > 1:
+        raise UsageError(
+            "Plots laid side by side have no place on a map; locate the centres plot by plot, each with "
+            "this fit."
+        )
     grid = like
     if grid is None:
         scale = fit.model.scale
@@ -95,7 +100,8 @@ def locate_centres(
 
     chain_seed, prediction_seed = np.random.default_rng(rng).spawn(2)
     sample = fit.sample
-    if sample is None:
+    # a fit to several plots together, say, holds no centres of this one
+    if sample is None or not sample.setup.holds(survey):
         setup = ChainSetup(survey.local_xy, area, fit.model, workers=workers, intensity=fit.intensity)
         sample = sample_until_converged(
             setup, rng=chain_seed, chains=chains, workers=workers, progress=progress

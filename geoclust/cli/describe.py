@@ -18,7 +18,7 @@ FIGURES = {"G": "G_nearest_neighbour", "F": "F_empty_space"}
 
 @click.command(short_help="Curves with envelopes, and tests of complete randomness.")
 @survey_arguments
-@takes(*READING, "covariate", "simulations", "r_max", "bandwidth")
+@takes(*READING, "plot_column", "covariate", "simulations", "r_max", "bandwidth")
 @out_option("Write the curves as CSV to this file.")
 @click.option("--figures", type=click.Path(path_type=Path), metavar="DIR", show_default="none",
               help="Draw L, g, G, F and J into this folder, one SVG file each.")  # fmt: skip
@@ -26,6 +26,7 @@ FIGURES = {"G": "G_nearest_neighbour", "F": "F_empty_space"}
 def describe(
     points: Path,
     area: Path,
+    plot_column: str | None,
     covariate: tuple[Path, ...],
     simulations: int,
     r_max: float | None,
@@ -48,6 +49,7 @@ def describe(
     import pandas as pd
 
     from geoclust import workflow
+    from geoclust.cli.plots import pooled_or_one
     from geoclust.curves.envelopes import randomness_envelopes
     from geoclust.curves.nearest import nearest_radii
     from geoclust.curves.quadrats import quadrat_test
@@ -59,7 +61,7 @@ def describe(
     from geoclust.terrain import explain, read_covariates
 
     with Talk(quiet) as talk:
-        survey = workflow.read_survey(points, area, **reading)
+        survey = pooled_or_one(points, area, plot_column, talk, **reading)
         used = chosen_seed(seed)
         radii = default_radii(survey.area)
         if r_max is not None:

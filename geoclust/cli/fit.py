@@ -11,20 +11,33 @@ from geoclust.cli.options import READING, RUNNING, out_option, survey_arguments,
 from geoclust.cli.output import as_json, put
 from geoclust.cli.seeds import chosen_seed
 from geoclust.cli.talk import Talk
-from geoclust.errors import CannotTell
+from geoclust.errors import CannotTell, UsageError
 
 
 @click.command(short_help="Fit a cluster model: how large, how many, how sure.")
 @survey_arguments
 @takes(
-    *READING, "model", "covariate", "method", "background", "chains", "function", "r_min", "r_max", "exponent"
+    *READING,
+    "plot_column",
+    "group_column",
+    "model",
+    "covariate",
+    "method",
+    "background",
+    "chains",
+    "function",
+    "r_min",
+    "r_max",
+    "exponent",
 )
-@takes("bandwidth", "distance_weight", "level_simulations", "bootstrap", "assess", "json")
+@takes("bandwidth", "distance_weight", "level_simulations", "bootstrap", "assess", "against", "json")
 @out_option("Write the fit as JSON to this file, for --fit of locate and simulate.")
 @takes("seed", "overwrite", *RUNNING)
 def fit(
     points: Path,
     area: Path,
+    plot_column: str | None,
+    group_column: str | None,
     model: str,
     covariate: tuple[Path, ...],
     method: str | None,
@@ -45,6 +58,7 @@ def fit(
     level_simulations: int,
     bootstrap: int,
     assess: bool,
+    against: tuple[str, ...],
     **reading: Any,
 ) -> int:
     """Fit a cluster model, with 95 % intervals and a verdict whether the data can tell.
@@ -52,28 +66,44 @@ def fit(
     Prints parameters with units as text, or everything as JSON with --json. Exit status 3: the data cannot
     tell.
     """
-    from geoclust import workflow
+    from geoclust.cli.plots import fit_groups, pooled_or_one
     from geoclust.fitting.assessment import assess_fit
+    from geoclust.fitting.choosing import comparable, compare_models
     from geoclust.fitting.fit import fit_clusters, method_for
     from geoclust.models.catalogue import model_by_name
-    from geoclust.report.record import add_assessment, add_terrain, fit_record
+    from geoclust.report.record import add_assessment, add_comparison, add_terrain, fit_record
     from geoclust.report.tables import text_lines
     from geoclust.seeds import stream
     from geoclust.terrain import intensity_of
 
     method_for(model_by_name(model), method)
+    compared = tuple(dict.fromkeys([model, *against])) if against else ()
+    if compared:
+        comparable(compared)
+        if covariate or group_column is not None:
+            raise UsageError(
+                "--against does not go with --covariate or --group-column; leave these out to compare models."
+            )
     with Talk(quiet) as talk:
-        survey = workflow.read_survey(points, area, **reading)
-        intensity = intensity_of(covariate, survey)
         used = chosen_seed(seed)
+        choices: dict[str, Any] = {
+            "method": method, "background": background, "chains": chains, "function": function,
+            "r_min": r_min, "r_max": r_max, "exponent": exponent, "bandwidth": bandwidth,
+            "distance_weight": distance_weight, "level_simulations": level_simulations,
+            "bootstrap": bootstrap, "workers": workers, "progress": talk.progress,
+        }  # fmt: skip
+        if group_column is not None:
+            if assess or covariate:
+                raise UsageError("--group-column does not go with --assess or --covariate; leave these out.")
+            return fit_groups(
+                points, area, plot_column, group_column, model, used, talk, out=out, json=json,
+                overwrite=overwrite, choices=choices, **reading,
+            )  # fmt: skip
+        survey = pooled_or_one(points, area, plot_column, talk, **reading)
+        intensity = intensity_of(covariate, survey)
         found, status, reason = None, "ok", ""
         try:
-            found = fit_clusters(
-                survey, model, method=method, background=background, chains=chains, function=function,
-                r_min=r_min, r_max=r_max, exponent=exponent, bandwidth=bandwidth,
-                distance_weight=distance_weight, level_simulations=level_simulations, bootstrap=bootstrap,
-                intensity=intensity, rng=stream(used, "fit"), workers=workers, progress=talk.progress,
-            )  # fmt: skip
+            found = fit_clusters(survey, model, intensity=intensity, rng=stream(used, "fit"), **choices)
             status, reason = found.status, found.reason
         except CannotTell as verdict:
             status, reason = verdict.status, str(verdict)
@@ -89,13 +119,25 @@ def fit(
                 survey, found, rng=stream(used, "assessment"), workers=workers, progress=talk.progress
             )
             add_assessment(record, assessment)
+        comparison = None
+        if compared and found is not None:
+            try:
+                comparison = compare_models(
+                    survey, compared, rng=stream(used, "comparison"), workers=workers, progress=talk.progress
+                )
+                add_comparison(record, comparison)
+            except CannotTell as verdict:
+                talk.say(f"no comparison: {verdict}")
         if out is not None:
             put(as_json(record), out, overwrite)
         if json:
             put(as_json(record), None)
-        elif status == "ok" and found is not None:
-            more = [] if assessment is None else [assessment.sentence()]
-            put("\n".join([*text_lines(found, survey), *more]), None)
+        elif found is not None:
+            lines = text_lines(found, survey) if status == "ok" else []
+            lines += [] if assessment is None else [assessment.sentence()]
+            lines += [] if comparison is None else comparison.sentences()
+            if lines:
+                put("\n".join(lines), None)
         talk.say(f"seed {used}")
         if status != "ok":
             talk.say(f"cannot tell ({status}): {reason}")

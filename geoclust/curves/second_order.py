@@ -131,7 +131,7 @@ def default_radii(area: StudyArea, count: int = 100) -> Floats:
 
     Beyond that few pairs are left in the study area (common practice).
     """
-    return np.linspace(0.0, 0.25 * np.sqrt(area.area), count + 1)[1:]
+    return np.linspace(0.0, 0.25 * area.side, count + 1)[1:]
 
 
 @dataclass(frozen=True)

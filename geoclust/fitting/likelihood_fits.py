@@ -75,7 +75,7 @@ def fit_pairs(
     UsageError
         If the range does not fit the study area.
     """
-    widest = 0.25 * float(np.sqrt(area.area))
+    widest = 0.25 * area.side
     r_min = choices.r_min or 0.0
     if choices.r_max is not None and choices.r_max > area.diameter:
         raise not_allowed(
@@ -133,7 +133,7 @@ def fit_by_likelihood(
 
     second: SecondLevel | None = None
     if len(kind.intensity_names) > 1 and level_simulations and p_value <= verdicts.TEST_LEVEL:
-        widest = 0.25 * float(np.sqrt(survey.area.area))
+        widest = 0.25 * survey.area.side
         far = max(found.likelihood.r_max, min(widest, CURVE_RANGE["g"] * found.model.spread))
         plain = ContrastChoices(r_max=far, bandwidth=choices.bandwidth)
         contrast, _ = measured_contrast(

@@ -94,7 +94,7 @@ def fit_points(
 
     `factors` are one over the intensity at each point, for the weighted curve, or None.
     """
-    widest = 0.25 * float(np.sqrt(area.area))
+    widest = 0.25 * area.side
     r_min = choices.r_min or 0.0
     if choices.r_max is not None and choices.r_max > area.diameter:
         raise not_allowed(

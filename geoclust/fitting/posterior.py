@@ -45,7 +45,7 @@ def default_priors(n: int, area: StudyArea, background: bool = False) -> Priors:
     thousandth and a quarter of that side. Background: exponential with a mean of a tenth of
     the prior mean of the parent intensity, in units of the mean offspring.
     """
-    side = float(np.sqrt(area.area))
+    side = area.side
     parents = 0.5 * max(n, 1) / area.area
     return Priors(
         parent_intensity=(1.0, 1.0 / parents),
@@ -251,7 +251,7 @@ def _verdict(
     r_hat, size = sample.worst
     if r_hat > HOPELESS_R_HAT or size < HOPELESS_SIZE:
         return _named("not-converged", r_hat=r_hat, size=size)
-    widest = 0.25 * float(np.sqrt(survey.area.area))
+    widest = 0.25 * survey.area.side
     if model.scale > 0.5 * widest:
         return _named("sigma-beyond-range", scale=model.scale, r_max=widest)
     clusters = float(np.mean(sample.draws.number_inside))

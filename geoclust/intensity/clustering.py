@@ -69,7 +69,7 @@ def fit_clustering(
     r_max
         Largest distance in metres.
     """
-    widest = 0.25 * float(np.sqrt(area.area))
+    widest = 0.25 * area.side
     found = _contrast(local_xy, area, factors, widest if r_max is None else r_max)
     if r_max is None and found.height > 0:
         shorter = RANGE_IN_SCALES * found.scale

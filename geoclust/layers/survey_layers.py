@@ -7,6 +7,7 @@ from dataclasses import dataclass
 
 import geopandas as gpd
 import numpy as np
+import pandas as pd
 import pyproj
 import shapely
 
@@ -69,6 +70,7 @@ def read_survey_layers(
     y_column: str | None = None,
     metric_crs: object | None = None,
     repair: bool = False,
+    plot: tuple[str, str] | None = None,
 ) -> SurveyLayers:
     """Read points and study area, bring them together in a metric CRS, and audit them.
 
@@ -88,6 +90,9 @@ def read_survey_layers(
         CRS to measure in; one is chosen if it is left out.
     repair
         Repair invalid polygons even if that moves more than 0.1 % of the area.
+    plot
+        Column and value: only features that have it are taken, from both layers. A plot
+        may hold one point or none; what is lost of a whole survey is not asked for.
 
     Returns
     -------
@@ -104,15 +109,17 @@ def read_survey_layers(
         points, "points", layer=points_layer, layer_option="points_layer", crs=crs, x_column=x_column,
         y_column=y_column,
     )  # fmt: skip
-    area_as_read = _read_area(area, area_layer, crs, repair)
+    if plot is not None:
+        point_layer = of_plot(point_layer, plot)
+    area_as_read = _read_area(area, area_layer, crs, repair, plot)
     _require_used(crs, point_layer, area_as_read.layer)
     taken = recorded.take_points(point_layer.frame.geometry.to_numpy())
-    if len(taken.xy) == 0:
+    if len(taken.xy) == 0 and plot is None:
         raise InputError(f"{point_layer.record.file} holds no point with finite coordinates")
-    # a stray point is dropped later on; here the usual one has to make sense
-    systems.require_plausible(
-        np.median(taken.xy, axis=0, keepdims=True), point_layer.crs, f"the points layer {_place(point_layer)}"
-    )
+    if len(taken.xy):
+        # a stray point is dropped later on; here the usual one has to make sense
+        middle = np.median(taken.xy, axis=0, keepdims=True)
+        systems.require_plausible(middle, point_layer.crs, f"the points layer {_place(point_layer)}")
 
     own = area_as_read.layer.crs
     choice = systems.choose_metric_crs(area_as_read.polygon, own, point_layer.crs, metric_crs)
@@ -125,7 +132,8 @@ def read_survey_layers(
     feature = taken.feature[reached]
     placed = recorded.place_points(xy, polygon)
     kept = placed.kept
-    _require_points(xy, kept, polygon, taken.xy, points_step, point_layer, area_as_read.layer)
+    if plot is None:
+        _require_points(xy, kept, polygon, taken.xy, points_step, point_layer, area_as_read.layer)
 
     lattices = find_lattices(taken.xy, geographic=bool(point_layer.crs.is_geographic))
     kept_xy = np.ascontiguousarray(xy[kept], dtype=float)
@@ -154,7 +162,7 @@ def read_survey_layers(
         coincident_places=tied_places,
         lattices=lattices,
         lattice_unit=point_layer.crs.axis_info[0].unit_name,
-        lattice_m=_lattice_in_metres(lattices, np.median(taken.xy[reached][kept], axis=0), points_step),
+        lattice_m=_lattice_in_metres(lattices, taken.xy[reached][kept], points_step),
         median_nearest_m=recorded.median_nearest(kept_xy),
         polygons_read=area_as_read.polygons_read,
         area_null_geometries=area_as_read.parts.null + area_as_read.parts.empty,
@@ -291,8 +299,40 @@ def _fit_parts(
     return parts, repaired, unwrapped
 
 
-def _read_area(path: PathLike, layer: str | None, crs: object | None, repair: bool) -> _Area:
+def of_plot(layer: Layer, plot: tuple[str, str]) -> Layer:
+    """The features of a layer that have this value in this column."""
+    column, value = plot
+    return dataclasses.replace(layer, frame=layer.frame[plot_names(layer, column) == value])
+
+
+def plot_names(layer: Layer, column: str) -> pd.Series:
+    """Names of the plots of the features of a layer, as text.
+
+    Raises
+    ------
+    InputError
+        If there is no such column, or a feature has no value in it.
+    """
+    if column not in layer.frame or column == layer.frame.geometry.name:
+        columns = ", ".join(str(c) for c in layer.frame.columns if c != layer.frame.geometry.name)
+        raise InputError(f"{_place(layer)} has no column {column}; it has {columns or 'none'}")
+    values = layer.frame[column]
+    if values.isna().any():
+        raise InputError(
+            f"{int(values.isna().sum())} features of {_place(layer)} have no value in the column {column}, "
+            "which says the plot of each: fill it in"
+        )
+    if pd.api.types.is_float_dtype(values) and (values % 1 == 0).all():
+        values = values.astype(int)
+    return values.astype(str)
+
+
+def _read_area(
+    path: PathLike, layer: str | None, crs: object | None, repair: bool, plot: tuple[str, str] | None
+) -> _Area:
     read = read_layer(path, "polygons", layer=layer, layer_option="area_layer", crs=crs)
+    if plot is not None:
+        read = of_plot(read, plot)
     polygons_read = len(shapes.take_apart(read.frame.geometry.to_numpy()).polygons)
     parts, repaired, unwrapped = _fit_parts(read, f"the study area {_place(read)}", repair)
     polygon, overlap = shapes.unite(parts)
@@ -374,10 +414,13 @@ def _require_points(
 
 
 def _lattice_in_metres(
-    lattices: tuple[Lattice, ...], middle: np.ndarray, step: systems.DatumStep | None
+    lattices: tuple[Lattice, ...], points: np.ndarray, step: systems.DatumStep | None
 ) -> float | None:
     """The widest lattice spacing that at least half of the points share, in metres at their middle."""
-    lengths = []
+    lengths: list[float] = []
+    if len(points) == 0:
+        return None
+    middle = np.median(points, axis=0)
     for lattice in lattices:
         if lattice.share < 0.5:
             continue
