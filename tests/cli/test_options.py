@@ -122,6 +122,25 @@ def test_zones_are_a_file_or_a_layer_of_the_area(tmp_path):
         (["analyse", "a.gpkg", "b.gpkg", "--out", "x", "--model", "tomas"], "thomas"),
         (["analyse", "a.gpkg", "b.gpkg", "--out", "x", "--zones-layer", "z"], "--zones"),
         (["fit", "a.gpkg", "b.gpkg", "--speed", "9"], "--speed"),
+        (["fit", "a.gpkg", "b.gpkg", "--function", "F"], "'L'"),
+        (
+            ["fit", "a.gpkg", "b.gpkg", "--model", "nested-thomas", "--method", "posterior"],
+            "nested-thomas is fitted by minimum-contrast",
+        ),
+        (
+            ["locate", "a.gpkg", "b.gpkg", "--out", "x", "--model", "variance-gamma"],
+            "Centres can be located for the models thomas",
+        ),
+        (
+            ["analyse", "a.gpkg", "b.gpkg", "--out", "x", "--model", "nested-thomas", "--zones", "z.gpkg"],
+            "leave them out",
+        ),
+        (
+            ["simulate", "a.gpkg", "b.gpkg", "--out", "x.gpkg", "--model", "variance-gamma"]
+            + [w for v in ("parent_intensity=1", "scale=9", "shape=-0.5", "mean_offspring=4")
+               for w in ("--parameter", v)],
+            "shape must be a finite number above -0.5",
+        ),
         (
             ["simulate", "a.gpkg", "b.gpkg", "--out", "x.gpkg", "--random", "--parameter", "sigma=1"],
             "--random",
