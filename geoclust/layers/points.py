@@ -144,7 +144,9 @@ def coincident(xy: np.ndarray) -> tuple[int, int]:
 
 
 def median_nearest(xy: np.ndarray) -> float:
-    """Median distance of the different places to their nearest neighbours."""
+    """Median distance of the different places to their nearest neighbours; infinite for a single place."""
     places = np.unique(xy, axis=0)
+    if len(places) < 2:
+        return float("inf")
     distance, _ = cKDTree(places).query(places, k=[2])
     return float(np.median(distance))
