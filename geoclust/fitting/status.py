@@ -82,10 +82,11 @@ def moment_verdict(
     if on_bound:
         name = on_bound[0]
         described = next(p for p in model.described if p.name == name)
-        factor, unit = (1e4, "ha⁻¹") if described.per_area else (1.0, described.unit)
+        unit = "" if described.unit == "1" else described.unit
+        factor, unit = (1e4, "ha⁻¹") if described.per_area else (1.0, unit)
         low, high = bounds[name]
         return named("on-bound", names=name.replace("_", " "),
-                     bounds=f"{low * factor:.3g} to {high * factor:.3g} {unit}")  # fmt: skip
+                     bounds=f"{low * factor:.3g} to {high * factor:.3g} {unit}".rstrip())  # fmt: skip
     clusters = model.parameters[model.intensity_names[0]] * area
     if clusters < FEWEST_CLUSTERS:
         return named("few-clusters", clusters=clusters, fewest=FEWEST_CLUSTERS)
