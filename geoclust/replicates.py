@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Unpack
 
 from geoclust.area.plots import pool_surveys
 from geoclust.area.study_area import StudyArea
 from geoclust.area.survey import Survey
 from geoclust.errors import InputError
 from geoclust.layers.sources import read_layer
-from geoclust.layers.survey_layers import PathLike, plot_names, read_survey_layers
+from geoclust.layers.survey_layers import PathLike, Reading, plot_names, read_survey_layers
 
 
 @dataclass(frozen=True, eq=False)
@@ -63,13 +64,7 @@ def read_plots(
     *,
     plot_column: str,
     group_column: str | None = None,
-    points_layer: str | None = None,
-    area_layer: str | None = None,
-    crs: object | None = None,
-    x_column: str | None = None,
-    y_column: str | None = None,
-    metric_crs: object | None = None,
-    repair: bool = False,
+    **reading: Unpack[Reading],
 ) -> Plots:
     """Read plots from two layers with a column that names the plot of each point and polygon.
 
@@ -78,7 +73,7 @@ def read_plots(
 
     Parameters
     ----------
-    points, area, points_layer, area_layer, crs, x_column, y_column, metric_crs, repair
+    points, area, reading
         As for `geoclust.workflow.read_survey`.
     plot_column
         Column of both layers.
@@ -90,10 +85,11 @@ def read_plots(
     InputError, UsageError
         One sentence on what was given, what is wrong and what to do.
     """
-    areas = read_layer(area, "polygons", layer=area_layer, layer_option="area_layer", crs=crs)
+    crs = reading.get("crs")
+    areas = read_layer(area, "polygons", layer=reading.get("area_layer"), layer_option="area_layer", crs=crs)
     given = read_layer(
-        points, "points", layer=points_layer, layer_option="points_layer", crs=crs, x_column=x_column,
-        y_column=y_column,
+        points, "points", layer=reading.get("points_layer"), layer_option="points_layer", crs=crs,
+        x_column=reading.get("x_column"), y_column=reading.get("y_column"),
     )  # fmt: skip
     of_area, of_points = plot_names(areas, plot_column), plot_names(given, plot_column)
     names = list(dict.fromkeys(of_area))
@@ -107,10 +103,7 @@ def read_plots(
                 )
     surveys = {}
     for name in names:
-        found = read_survey_layers(
-            points, area, points_layer=points_layer, area_layer=area_layer, crs=crs, x_column=x_column,
-            y_column=y_column, metric_crs=metric_crs, repair=repair, plot=(plot_column, name),
-        )  # fmt: skip
+        found = read_survey_layers(points, area, plot=(plot_column, name), **reading)
         surveys[name] = Survey(
             found.xy, StudyArea(found.polygon, found.crs), attributes=found.attributes, audit=found.audit
         )

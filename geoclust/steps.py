@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from pathlib import Path
-from typing import Any
+from typing import Unpack
 
 from geoclust.area.study_area import StudyArea
 from geoclust.centres.locate import locate_centres
@@ -14,7 +14,7 @@ from geoclust.fitting.result import ClusterFit
 from geoclust.layers import styles
 from geoclust.layers.package import PatternWriter
 from geoclust.layers.results_folder import results_folder
-from geoclust.layers.survey_layers import PathLike
+from geoclust.layers.survey_layers import PathLike, Reading
 from geoclust.models.base import ClusterModel
 from geoclust.models.catalogue import check_sampled, model_by_name
 from geoclust.report.saved_fit import read_fit
@@ -44,7 +44,7 @@ def locate(
     overwrite: bool = False,
     workers: int | None = None,
     progress: Progress | None = None,
-    **reading: Any,
+    **reading: Unpack[Reading],
 ) -> Analysis:
     """Map the centres of a survey and outline its clusters, in a folder of their own.
 
@@ -120,7 +120,7 @@ def simulate(
     overwrite: bool = False,
     workers: int | None = None,
     progress: Progress | None = None,
-    **reading: Any,
+    **reading: Unpack[Reading],
 ) -> int:
     """Simulate patterns in the study area of a survey, streamed to a layer.
 

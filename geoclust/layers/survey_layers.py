@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import dataclasses
 from dataclasses import dataclass
+from typing import TypedDict, Unpack
 
 import geopandas as gpd
 import numpy as np
@@ -57,6 +58,18 @@ class _Area:
     repair: shapes.Repair
     overlap_share: float
     unwrapped: bool
+
+
+class Reading(TypedDict, total=False):
+    """How layers are read; each as in `read_survey_layers`."""
+
+    points_layer: str | None
+    area_layer: str | None
+    crs: object | None
+    x_column: str | None
+    y_column: str | None
+    metric_crs: object | None
+    repair: bool
 
 
 def read_survey_layers(
@@ -196,23 +209,9 @@ def read_survey_layers(
     return SurveyLayers(kept_xy, polygon, choice.crs, attributes.set_geometry(flat_points), audit)
 
 
-def audit_survey(
-    points: PathLike,
-    area: PathLike,
-    *,
-    points_layer: str | None = None,
-    area_layer: str | None = None,
-    crs: object | None = None,
-    x_column: str | None = None,
-    y_column: str | None = None,
-    metric_crs: object | None = None,
-    repair: bool = False,
-) -> Audit:
+def audit_survey(points: PathLike, area: PathLike, **reading: Unpack[Reading]) -> Audit:
     """The data audit alone; parameters and errors of `read_survey_layers`."""
-    return read_survey_layers(
-        points, area, points_layer=points_layer, area_layer=area_layer, crs=crs, x_column=x_column,
-        y_column=y_column, metric_crs=metric_crs, repair=repair,
-    ).audit  # fmt: skip
+    return read_survey_layers(points, area, **reading).audit
 
 
 def read_polygons(
