@@ -31,28 +31,34 @@ RENORM = 64
 
 
 class Chains(NamedTuple):
-    """The boundary as a hierarchy of chains of edges, each ring halved again and again, in preorder."""
+    """The boundary as a hierarchy of chains of edges, in preorder.
+
+    Rings that lie together form groups, halved again and again down to a ring, and rings chains of
+    edges, halved down to an edge. A group has no chord: both its ends are its middle.
+    """
 
     form: np.ndarray  # (nodes, 14)
     after: np.ndarray  # (nodes,) int, the next chain that is no part of this one; a leaf is one edge
 
 
 @njit(nogil=True, cache=True)
-def describe(starts, ends, first, last, out):
-    """Fill one row: the chain of edges first ... last - 1 of one ring."""
+def describe(starts, ends, first, last, whole, out):
+    """Fill one row: the chain of edges first ... last - 1 of one ring, or of whole rings."""
     ax, ay, bx, by = starts[first, 0], starts[first, 1], ends[last - 1, 0], ends[last - 1, 1]
     x0, x1, y0, y1 = ax, ax, ay, ay
     for k in range(first, last):
         x0, x1 = min(x0, ends[k, 0]), max(x1, ends[k, 0])
         y0, y1 = min(y0, ends[k, 1]), max(y1, ends[k, 1])
     mx, my = 0.5 * (x0 + x1), 0.5 * (y0 + y1)
+    if whole:
+        ax, ay, bx, by = mx, my, mx, my
     out[:] = 0.0
     out[AX], out[AY], out[BX], out[BY], out[MX], out[MY] = ax, ay, bx, by, mx, my
-    for k in range(first, last + 1):
+    # whole rings close by themselves; a chain is closed along its chord
+    for k in range(first, last if whole else last + 1):
         if k < last:
             px, py, qx, qy = starts[k, 0] - mx, starts[k, 1] - my, ends[k, 0] - mx, ends[k, 1] - my
         else:
-            # back along the chord
             px, py, qx, qy = bx - mx, by - my, ax - mx, ay - my
         cross = px * qy - py * qx
         out[AREA] += cross / 2.0
@@ -68,27 +74,72 @@ def describe(starts, ends, first, last, out):
 
 
 @njit(nogil=True, cache=True)
+def neighbours_in_a_row(middles):
+    """Order of rings in which each half, each quarter, ... lies together: cut across the longer side."""
+    order = np.arange(middles.shape[0])
+    first, last, count = np.empty(128, np.int64), np.empty(128, np.int64), 1
+    first[0], last[0] = 0, order.size
+    while count > 0:
+        count -= 1
+        a, b = first[count], last[count]
+        if b - a < 3:
+            continue
+        x, y = middles[order[a:b], 0], middles[order[a:b], 1]
+        along = x if x.max() - x.min() > y.max() - y.min() else y
+        order[a:b] = order[a:b][np.argsort(along)]
+        middle = (a + b) // 2
+        first[count], last[count] = middle, b
+        first[count + 1], last[count + 1] = a, middle
+        count += 2
+    return order
+
+
+@njit(nogil=True, cache=True)
 def chain_tree(starts, ends, ring_sizes):
     """Build the hierarchy over all rings, given the starts and ends of their edges in order."""
+    rings = ring_sizes.size
+    begin = np.zeros(rings + 1, np.int64)
+    middles = np.empty((rings, 2))
+    for r in range(rings):
+        begin[r + 1] = begin[r] + ring_sizes[r]
+        for d in range(2):
+            at = starts[begin[r] : begin[r + 1], d]
+            middles[r, d] = 0.5 * (at.min() + at.max())
+    # edges ring by ring, in the order in which rings are grouped
+    x, y, place = np.empty_like(starts), np.empty_like(ends), np.zeros(rings + 1, np.int64)
+    order = neighbours_in_a_row(middles)
+    for k in range(rings):
+        r = order[k]
+        place[k + 1] = place[k] + ring_sizes[r]
+        x[place[k] : place[k + 1]] = starts[begin[r] : begin[r + 1]]
+        y[place[k] : place[k + 1]] = ends[begin[r] : begin[r + 1]]
     # a binary tree over m edges has 2 m - 1 nodes
-    form = np.empty((2 * starts.shape[0] - ring_sizes.size, 14))
+    form = np.empty((2 * starts.shape[0] - 1, 14))
     after = np.empty(form.shape[0], np.int64)
-    first, last, count = np.empty(128, np.int64), np.empty(128, np.int64), 0
-    node, at = 0, 0
-    for ring in range(ring_sizes.size):
-        first[0], last[0], count = at, at + ring_sizes[ring], 1
-        at += ring_sizes[ring]
-        while count > 0:
-            count -= 1
-            a, b = first[count], last[count]
-            describe(starts, ends, a, b, form[node])
+    first, last, count = np.empty(128, np.int64), np.empty(128, np.int64), 1
+    # rings are told from edges by their sign: -1 - ring
+    first[0], last[0] = -1, -1 - rings
+    node = 0
+    while count > 0:
+        count -= 1
+        a, b = first[count], last[count]
+        if a < 0:
+            p, q = -1 - a, -1 - b
+            if q - p == 1:
+                a, b = place[p], place[q]
+            else:
+                describe(x, y, place[p], place[q], True, form[node])
+                after[node] = node + 2 * (place[q] - place[p]) - 1
+                middle = -1 - (p + q) // 2
+        if a >= 0:
+            describe(x, y, a, b, False, form[node])
             after[node] = node + 2 * (b - a) - 1
-            node += 1
-            if b - a > 1:
-                middle = (a + b) // 2
-                first[count], last[count] = middle, b
-                first[count + 1], last[count + 1] = a, middle
-                count += 2
+            middle = (a + b) // 2
+        if after[node] > node + 1:
+            first[count], last[count] = middle, b
+            first[count + 1], last[count + 1] = a, middle
+            count += 2
+        node += 1
     return Chains(form, after)
 
 

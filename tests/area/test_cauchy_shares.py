@@ -127,7 +127,7 @@ def test_chains_taken_together_stay_within_their_tolerance(name):
         for tolerance in (1e-6, 1e-12):
             cauchy_many(area.chains, at, omega, tolerance, close)
             assert np.abs(close - exact).max() < 100 * tolerance
-    assert len(area.chains.after) == 2 * area.edges - len(area._ring_sizes)
+    assert len(area.chains.after) == 2 * area.edges - 1
 
 
 def test_far_away_a_share_is_area_times_density():
