@@ -94,8 +94,8 @@ def summary(tables: dict[int, pd.DataFrame]) -> list[str]:
     heads = " | ".join(f"{d + 1}: ρ | {d + 1}: σ" for d in tables)
     lines = [
         f"Surveys on the four designs: {counts}. Root mean squares of log(estimate / truth); `all` is that",
-        "over both parameters and all designs. Ranges in scales of a first fit; `whole` is a quarter of the side.",
-        "The ways that are the defaults are in bold.", "",
+        "over both parameters and all designs. Ranges in scales of a first fit; `whole` is a quarter of the",
+        "side. The ways that are the defaults are in bold.", "",
         f"| function | power | weight | range | {heads} | all |", "|" + "---|" * (5 + 2 * len(tables)),
     ]  # fmt: skip
     rows = []
