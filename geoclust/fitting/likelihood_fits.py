@@ -36,9 +36,9 @@ Floats = npt.NDArray[np.float64]
 Progress = Callable[[str, int, int], None]
 
 FORMS = (PALM, COMPOSITE)
-# the range follows the clusters: of 30 simulated surveys in each of two designs, 3 and 6 scales had the
-# smallest errors of 2 to 12. The Palm likelihood gains nothing from pairs that are hardly ever siblings;
-# the composite likelihood needs them, as what it divides by has to tell clusters from randomness
+# the range follows the clusters: of 2 to 12 scales, 3 and 6 had about the smallest errors in simulated Thomas
+# surveys (tests/studies/pair_ranges.py). The Palm likelihood gains nothing from pairs that are hardly ever
+# siblings; the composite likelihood needs them, as what it divides by has to tell clusters from randomness
 RANGE_IN_SCALES = {PALM: 3.0, COMPOSITE: 6.0}
 
 
