@@ -376,7 +376,7 @@ def test_range_is_settable_and_reported(survey):
 
 
 def test_one_level_of_clusters_is_not_taken_for_two(survey):
-    fit = fit_clusters(survey, "nested-thomas", method=PALM, bootstrap=39, level_simulations=19, rng=1)
+    fit = fit_clusters(survey, "nested-thomas", method=PALM, bootstrap=39, level_simulations=39, rng=1)
     assert fit.status == "one-level"
     assert fit.choices["second_level_p_value"] > 0.05
     assert fit.intervals == {}
