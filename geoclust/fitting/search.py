@@ -86,7 +86,11 @@ class Limits:
 
         Clusters much narrower than the kernel of g, or than the first radius of K, all look the same.
         """
-        narrowest = contrast.radii[0] / 4.0 if contrast.bandwidth is None else contrast.bandwidth / NARROWEST
+        if contrast.bandwidth is None:
+            # radii that crowd at short distances see no smaller clusters than even ones
+            narrowest = max(contrast.radii[0] / 4.0, contrast.radii[-1] / 512.0)
+        else:
+            narrowest = contrast.bandwidth / NARROWEST
         return cls((0.1 / area, 10.0 * intensity), (float(narrowest), 2.0 * float(contrast.radii[-1])))
 
     @property
@@ -367,7 +371,9 @@ def _fit_two_levels(contrast: Contrast, intensity: float, limits: Limits) -> Con
 
     def model_at(theta: Floats) -> NestedThomas:
         rho_outer, rho_inner, scale, ratio = (float(v) for v in np.exp(theta))
-        return NestedThomas(rho_outer, scale * ratio, rho_inner, scale, intensity / rho_inner)
+        # the ratio is searched, but it is the outer scale that has a limit
+        outer = max(min(scale * ratio, limits.scale[1]), scale * LEAST_RATIO)
+        return NestedThomas(rho_outer, outer, rho_inner, scale, intensity / rho_inner)
 
     def residuals(theta: Floats) -> Floats:
         return contrast.residuals_of(contrast.linear_of(model_at(theta)))
@@ -375,7 +381,8 @@ def _fit_two_levels(contrast: Contrast, intensity: float, limits: Limits) -> Con
     # the last digits without the table
     theta = least_squares(residuals, found.theta, bounds=(low, high), xtol=1e-10, ftol=1e-12).x
     names = ("outer_intensity", "inner_intensity", "inner_sigma", "outer_sigma")
-    on_bound = tuple(n for n, t, lo, hi in zip(names, theta, low, high, strict=True)
+    most = np.minimum(high, [*high[:3], np.log(limits.scale[1]) - theta[2]])
+    on_bound = tuple(n for n, t, lo, hi in zip(names, theta, low, most, strict=True)
                      if t - lo < NEAR or hi - t < NEAR)  # fmt: skip
     bounds = {n: limits.intensity if n.endswith("intensity") else limits.scale for n in names}
     model = model_at(theta)
