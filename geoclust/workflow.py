@@ -302,10 +302,13 @@ def _analyse_survey(
         status, reason = fit.status, fit.reason
         if fit.ok:
             part, least, most = REFITS
-            assessment = assess_fit(
-                survey, fit, simulations=min(max(simulations // part, least), most),
-                rng=stream(seed, "assessment"), workers=workers, progress=progress,
-            )  # fmt: skip
+            try:
+                assessment = assess_fit(
+                    survey, fit, simulations=min(max(simulations // part, least), most),
+                    rng=stream(seed, "assessment"), workers=workers, progress=progress,
+                )  # fmt: skip
+            except CannotTell as verdict:
+                notes.append(str(verdict))
             if fit.model.sampled:
                 centres = locate_centres(
                     survey, fit, cell=cell, like=extras.grid, zones=extras.zones,

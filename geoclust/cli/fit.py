@@ -115,10 +115,13 @@ def fit(
             add_terrain(record, intensity, {})
         assessment = None
         if assess and found is not None and status == "ok":
-            assessment = assess_fit(
-                survey, found, rng=stream(used, "assessment"), workers=workers, progress=talk.progress
-            )
-            add_assessment(record, assessment)
+            try:
+                assessment = assess_fit(
+                    survey, found, rng=stream(used, "assessment"), workers=workers, progress=talk.progress
+                )
+                add_assessment(record, assessment)
+            except CannotTell as verdict:
+                talk.say(str(verdict))
         comparison = None
         if compared and found is not None:
             try:

@@ -11,8 +11,8 @@ import shapely
 import geoclust as gc
 from geoclust.errors import CannotTell, UsageError
 from geoclust.fitting import assessment
-from geoclust.fitting.assessment import Refit, Summary, adjusted_p_value, evidence
 from geoclust.fitting.moments import fit_points
+from geoclust.fitting.two_stages import Refit, Summary, adjusted_p_value, evidence, hull
 from geoclust.models.patterns import draw_pattern, simple_surroundings
 
 PLOT = gc.StudyArea(shapely.box(0, 0, 400, 300).difference(shapely.box(180, 120, 230, 170)))
@@ -159,7 +159,7 @@ def test_the_envelope_is_left_exactly_by_what_is_rejected():
     rows = rng.normal(size=(40, 6)).cumsum(axis=1)
     share = rank_lengths(rows)
     for most in (1, 2, 5, 13):
-        low, high = assessment._hull(rows, most)
+        low, high = hull(rows, most)
         outside = ((rows < low) | (rows > high)).any(axis=1)
         np.testing.assert_array_equal(outside, share <= most / 40 + 1e-12)
 
@@ -223,3 +223,21 @@ def test_nothing_to_assess():
     with pytest.raises(CannotTell, match="no fitted model to assess") as told:
         gc.assess_fit(survey, fit, rng=1)
     assert told.value.status == "no-clustering"
+
+
+def test_fits_with_too_many_centres_are_not_simulated(thomas_survey, thomas_fit, monkeypatch):
+    """Patterns whose refit is out of bounds are drawn again; a survey whose refit is cannot be assessed."""
+    asked = []
+
+    def few(model, area):
+        # the survey passes, and every second pattern after it
+        asked.append(model)
+        return 0.0 if len(asked) == 1 or len(asked) % 2 else 1e9
+
+    monkeypatch.setattr(assessment, "_centres", few)
+    result = gc.assess_fit(thomas_survey, thomas_fit, simulations=19, first_stage=19, rng=8, workers=1)
+    assert len(asked) == 1 + 2 * 19
+    assert len(result.first_p_values) == 20
+    monkeypatch.setattr(assessment, "_centres", lambda model, area: 1e9)
+    with pytest.raises(CannotTell, match="more centres than can be simulated"):
+        gc.assess_fit(thomas_survey, thomas_fit, simulations=19, rng=8)

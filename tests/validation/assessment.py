@@ -27,8 +27,9 @@ from known_areas import sample_reserve
 from tables import machine, run_missing, shares_within
 
 import geoclust as gc
-from geoclust.fitting.assessment import Refit, Summary, two_stage_test
+from geoclust.fitting.assessment import two_stage_test
 from geoclust.fitting.moments import ContrastChoices, fit_points
+from geoclust.fitting.two_stages import Refit, Summary
 from geoclust.models.base import ClusterModel
 from geoclust.models.patterns import draw_pattern
 
