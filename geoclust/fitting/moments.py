@@ -29,8 +29,11 @@ Floats = npt.NDArray[np.float64]
 Progress = Callable[[str, int, int], None]
 
 NODES = 128
-# K and L gather the noise of all shorter distances, so their range follows the clusters; g does not
-RANGE_IN_SCALES = {"K": 6.0, "g": 12.0, "L": 6.0}
+# K and L gather the noise of all shorter distances, so their range follows the clusters closely; g does
+# not, and hardly cares (tests/studies/contrast_defaults.py)
+RANGE_IN_SCALES = {"K": 4.0, "g": 12.0, "L": 4.0}
+# with two levels the tail of the large clusters has to tell them from randomness
+LEVELS_IN_SCALES = {"K": 6.0, "g": 12.0, "L": 6.0}
 
 
 @dataclass(frozen=True)
@@ -107,10 +110,11 @@ def fit_points(
     contrast, width = measured_contrast(kind, local_xy, area, choices, r_max, workers, factors)
     fit = fit_contrast(kind, contrast, intensity, area.area)
     if choices.r_max is None:
-        shorter = RANGE_IN_SCALES[choices.function] * fit.model.spread
+        levels = len(kind.intensity_names)
+        shorter = (RANGE_IN_SCALES if levels == 1 else LEVELS_IN_SCALES)[choices.function] * fit.model.spread
         if shorter < 0.8 * widest:
             r_max = max(shorter, 4.0 * width, 2.0 * r_min)
-            if len(kind.intensity_names) > 1:
+            if levels > 1:
                 contrast = contrast.up_to(r_max)
                 r_max = float(contrast.radii[-1])
             else:
