@@ -30,7 +30,7 @@ def describe(
     covariate: tuple[Path, ...],
     simulations: int,
     r_max: float | None,
-    bandwidth: float | None,
+    bandwidth: float | str | None,
     out: Path | None,
     figures: Path | None,
     seed: int | None,
@@ -49,6 +49,7 @@ def describe(
     import pandas as pd
 
     from geoclust import workflow
+    from geoclust.cli.bandwidths import chosen_bandwidth
     from geoclust.cli.plots import pooled_or_one
     from geoclust.curves.envelopes import randomness_envelopes
     from geoclust.curves.nearest import nearest_radii
@@ -66,8 +67,9 @@ def describe(
         radii = default_radii(survey.area)
         if r_max is not None:
             radii = radii * (r_max / radii[-1])
+        width = chosen_bandwidth(bandwidth, survey, float(radii[-1]), workers, talk)
         tests = randomness_envelopes(
-            survey, radii, simulations=simulations, bandwidth=bandwidth,
+            survey, radii, simulations=simulations, bandwidth=width,
             rng=stream(used, "curves"), workers=workers, progress=talk.progress,
         )  # fmt: skip
         nearest_seed, spacing_seed, quadrat_seed, deviation_seed, terrain_seed = stream(

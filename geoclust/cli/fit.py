@@ -7,7 +7,7 @@ from typing import Any
 
 import click
 
-from geoclust.cli.options import READING, RUNNING, out_option, survey_arguments, takes
+from geoclust.cli.options import CROSS_VALIDATION, READING, RUNNING, out_option, survey_arguments, takes
 from geoclust.cli.output import as_json, put
 from geoclust.cli.seeds import chosen_seed
 from geoclust.cli.talk import Talk
@@ -53,7 +53,7 @@ def fit(
     r_min: float | None,
     r_max: float | None,
     exponent: float | None,
-    bandwidth: float | None,
+    bandwidth: float | str | None,
     distance_weight: float,
     level_simulations: int,
     bootstrap: int,
@@ -66,6 +66,7 @@ def fit(
     Prints parameters with units as text, or everything as JSON with --json. Exit status 3: the data cannot
     tell.
     """
+    from geoclust.cli.bandwidths import chosen_bandwidth
     from geoclust.cli.plots import fit_groups, pooled_or_one
     from geoclust.fitting.assessment import assess_fit
     from geoclust.fitting.choosing import comparable, compare_models
@@ -93,6 +94,8 @@ def fit(
             "bootstrap": bootstrap, "workers": workers, "progress": talk.progress,
         }  # fmt: skip
         if group_column is not None:
+            if bandwidth == CROSS_VALIDATION:
+                raise UsageError("--bandwidth must be a number of metres here, the same for all groups.")
             if assess or covariate:
                 raise UsageError("--group-column does not go with --assess or --covariate; leave these out.")
             return fit_groups(
@@ -100,6 +103,8 @@ def fit(
                 overwrite=overwrite, choices=choices, **reading,
             )  # fmt: skip
         survey = pooled_or_one(points, area, plot_column, talk, **reading)
+        widest = r_max if r_max is not None else 0.25 * survey.area.side
+        choices["bandwidth"] = chosen_bandwidth(bandwidth, survey, widest, workers, talk)
         intensity = intensity_of(covariate, survey)
         found, status, reason = None, "ok", ""
         try:

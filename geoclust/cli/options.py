@@ -69,6 +69,23 @@ class Option:
 
 
 _POSITIVE = click.FloatRange(min=0, min_open=True)
+
+
+class _Bandwidth(click.ParamType):
+    """A positive number of metres, or the word for choosing one by cross-validation."""
+
+    name = "bandwidth"
+
+    def convert(self, value: Any, param: click.Parameter | None, ctx: click.Context | None) -> float | str:
+        if value == CROSS_VALIDATION:
+            return CROSS_VALIDATION
+        try:
+            return _POSITIVE.convert(value, param, ctx)
+        except click.BadParameter:
+            self.fail(f"{value!r} is neither a positive number of metres nor {CROSS_VALIDATION}.", param, ctx)
+
+
+CROSS_VALIDATION = "cross-validation"
 _PATH = click.Path(path_type=Path)
 
 _DECLARED = (
@@ -135,7 +152,8 @@ _DECLARED = (
     Option("--level-simulations", "Patterns simulated to tell whether the second level of nested-thomas "
                                   "earns its place: 0 to leave that open, or at least 39.",
            default=99, kind=click.IntRange(min=0), metavar="COUNT"),
-    Option("--bandwidth", "Half width of the kernel of g, metres.", kind=_POSITIVE, metavar="METRES",
+    Option("--bandwidth", "Half width of the kernel of g in metres, or the word cross-validation "
+                          "(Guan 2007).", kind=_Bandwidth(), metavar="METRES",
            otherwise="0.15 mean spacings"),
     Option("--bootstrap", "Patterns simulated for the 95 % intervals: 0 for no intervals, or at least 39.",
            default=199, kind=click.IntRange(min=0), metavar="COUNT"),

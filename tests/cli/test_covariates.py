@@ -14,6 +14,8 @@ from pyproj import CRS
 from rasterio.transform import from_origin
 
 from geoclust.cli.entry import run
+from geoclust.curves.bandwidth import cross_validated_bandwidth
+from geoclust.workflow import read_survey
 
 # corner of the survey of conftest.py
 WEST, SOUTH = 604_000.0, 5_737_000.0
@@ -109,3 +111,15 @@ def test_describe_beyond_covariates(survey_file, wetness, capsys):
     assert {"L", "g", "L beyond covariates", "g beyond covariates"} <= functions
     assert "Loosmore & Ford (2006) on L" in said.err
     assert "beyond the covariates: p = " in said.err
+
+
+def test_bandwidth_by_cross_validation(survey_file, capsys):
+    """What was chosen is told, and it is what the function chooses; a wrong word is refused."""
+    given = ["describe", *layers_of(survey_file), "--simulations", "39", "--seed", "1", "--bandwidth"]
+    assert run([*given, "cross-validation"]) == 0
+    said = capsys.readouterr()
+    survey = read_survey(survey_file, survey_file, points_layer="mounds", area_layer="reserve")
+    found = cross_validated_bandwidth(survey, 0.25 * survey.area.side)
+    assert f"bandwidth of g: {found.bandwidth:.4g} m by cross-validation, Guan 2007" in said.err
+    assert run([*given, "wide"]) == 2
+    assert "neither a positive number of metres nor cross-validation" in capsys.readouterr().err
