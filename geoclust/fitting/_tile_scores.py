@@ -1,4 +1,4 @@
-"""Compiled predictive densities of the points in a held-out tile, one draw after the other."""
+"""Compiled predictive density of the points in a held-out tile, averaged over draws from the rest."""
 
 from __future__ import annotations
 
@@ -14,15 +14,19 @@ NODES, NODES_DISC = 1.5, 12.0
 FURTHEST = 4.0
 # nodes of the integral over centres that leave no point, at most
 MOST_NODES = 800.0
+# new clusters in one tile, at most
+MOST_CLUSTERS = 24
 
 
 @njit(nogil=True, cache=True)
-def log_densities(kernel, reach, points, box, tile_area, rest, tile, shifts, centres, start, draws, rng, out):
-    """Log density of the points of a tile for each draw, estimated without bias.
+def log_density(kernel, reach, points, box, tile_area, rest, tile, shifts, centres, start, draws, rng):
+    """Log of the mean over draws of the density of the points of a tile.
 
     Centres with points in the rest are known in a draw. Those without are, given the draw, a
-    Poisson process of intensity rho exp(-mu s(c)), s the share of the rest; they are integrated out,
-    together with the membership of the points, which is imputed point by point (Kong, Liu & Wong 1994).
+    Poisson process of intensity rho exp(-mu s(c)), s the share of the rest; they are integrated out.
+    The membership of the points is imputed point by point (Kong, Liu & Wong 1994), draws
+    with small weights giving way to copies of others as it goes on (Liu & Chen 1998). The mean
+    itself, not its logarithm, is unbiased.
 
     Parameters
     ----------
@@ -44,80 +48,122 @@ def log_densities(kernel, reach, points, box, tile_area, rest, tile, shifts, cen
         (d, 4) scale, parent intensity, mean offspring, background.
     rng
         Generator.
-    out
-        (d,)
     """
-    n = points.shape[0]
-    weight = np.empty(n + 2)
+    n, m = points.shape[0], draws.shape[0]
+    room = max(min(n, MOST_CLUSTERS), 1)
     per_scale = NODES_DISC if kernel == DISC else NODES
     near = min(reach, FURTHEST)
     half = int(np.ceil(near * per_scale)) + 1
     side = 2 * half
-    # of each new cluster: its nodes and the weight of a centre there, given its points so far
-    node_x, node_y = np.empty((n + 1, side * side)), np.empty((n + 1, side * side))
-    value = np.empty((n + 1, side * side))
-    count, mass = np.empty(n + 1, np.int64), np.empty(n + 1)
     most = reach * reach
-    for d in range(draws.shape[0]):
+    # of each new cluster: the corner of its lattice, and the weight of a centre there given its points
+    corner, value = np.zeros((m, room, 2)), np.zeros((m, room, side * side))
+    mass, clusters = np.zeros((m, room)), np.zeros(m, np.int64)
+    which, log_weight = np.arange(m), np.empty(m)
+    weight, fresh = np.empty(room + 2), np.empty(side * side)
+    for d in range(m):
         scale, rho, mu, background = draws[d, 0], draws[d, 1], draws[d, 2], draws[d, 3]
-        per = 1.0 / (scale * scale)
-        peak = kernel_peak(kernel, scale)
-        total = -background * tile_area
+        log_weight[d] = -background * tile_area
+        log_weight[d] -= _unseen(box, reach * scale, scale, rho, mu, rest, tile, shifts, rng)
         for c in range(start[d], start[d + 1]):
-            total -= mu * _share(tile, centres[c, 0], centres[c, 1], shifts[1], scale)
-        total -= _unseen(box, reach * scale, scale, rho, mu, rest, tile, shifts, rng)
-        clusters = 0
-        for i in range(n):
-            x, y = points[i, 0], points[i, 1]
+            log_weight[d] -= mu * _share(tile, centres[c, 0], centres[c, 1], shifts[1], scale)
+    total = 0.0
+    for i in range(n):
+        x, y = points[i, 0], points[i, 1]
+        for d in range(m):
+            row = which[d]
+            scale, rho, mu, background = draws[row, 0], draws[row, 1], draws[row, 2], draws[row, 3]
+            per, step = 1.0 / (scale * scale), scale / per_scale
+            peak = kernel_peak(kernel, scale)
             known = background
-            for c in range(start[d], start[d + 1]):
+            for c in range(start[row], start[row + 1]):
                 dx, dy = x - centres[c, 0], y - centres[c, 1]
                 known += mu * peak * kernel_shape(kernel, (dx * dx + dy * dy) * per, most)
             weight[0] = known
             sum_of = known
-            for b in range(clusters):
-                joined = 0.0
-                for k in range(count[b]):
-                    dx, dy = x - node_x[b, k], y - node_y[b, k]
-                    joined += value[b, k] * kernel_shape(kernel, (dx * dx + dy * dy) * per, most)
-                weight[b + 1] = mu * peak * joined / mass[b]
+            new = clusters[d]
+            for b in range(new):
+                joined = _joined(value[d, b], corner[d, b], side, step, x, y, kernel, per, most, False)
+                weight[b + 1] = mu * peak * joined / mass[d, b]
                 sum_of += weight[b + 1]
-            # a cluster of its own, on a lattice round the point with a random offset
-            new = clusters
-            step = scale / per_scale
+            alone = 0.0
             left, bottom = x - (half - rng.random()) * step, y - (half - rng.random()) * step
-            filled, alone = 0, 0.0
-            for p in range(side):
-                for q in range(side):
-                    u, v = left + p * step, bottom + q * step
-                    dx, dy = x - u, y - v
-                    shape = kernel_shape(kernel, (dx * dx + dy * dy) * per, near * near)
-                    if shape > 0.0:
-                        seen = _share(rest, u, v, shifts[0], scale) + _share(tile, u, v, shifts[1], scale)
-                        node_x[new, filled], node_y[new, filled] = u, v
-                        value[new, filled] = shape * np.exp(-mu * seen)
-                        alone += value[new, filled]
-                        filled += 1
-            count[new], mass[new] = filled, alone
+            if new < room:
+                # a cluster of its own, on a lattice round the point with a random offset
+                for p in range(side):
+                    for q in range(side):
+                        u, v = left + p * step, bottom + q * step
+                        dx, dy = x - u, y - v
+                        shape = kernel_shape(kernel, (dx * dx + dy * dy) * per, near * near)
+                        if shape > 0.0:
+                            seen = _share(rest, u, v, shifts[0], scale) + _share(tile, u, v, shifts[1], scale)
+                            shape *= np.exp(-mu * seen)
+                        fresh[p * side + q] = shape
+                        alone += shape
             weight[new + 1] = rho * mu * peak * alone * step * step
             sum_of += weight[new + 1]
-            total += np.log(sum_of)
+            log_weight[d] += np.log(sum_of)
             pick = rng.random() * sum_of
             chosen = 0
             while chosen < new + 1 and pick >= weight[chosen]:
                 pick -= weight[chosen]
                 chosen += 1
-            if chosen == new + 1:
-                clusters += 1
-            elif chosen > 0:
+            if chosen == new + 1 and new < room:
+                corner[d, new, 0], corner[d, new, 1] = left, bottom
+                value[d, new] = fresh
+                mass[d, new] = alone
+                clusters[d] += 1
+            elif 0 < chosen <= new:
                 b = chosen - 1
-                again = 0.0
-                for k in range(count[b]):
-                    dx, dy = x - node_x[b, k], y - node_y[b, k]
-                    value[b, k] *= kernel_shape(kernel, (dx * dx + dy * dy) * per, most)
-                    again += value[b, k]
-                mass[b] = again
-        out[d] = total
+                mass[d, b] = _joined(value[d, b], corner[d, b], side, step, x, y, kernel, per, most, True)
+        top = log_weight.max()
+        if top == -np.inf:
+            return top
+        relative = np.exp(log_weight - top)
+        if i < n - 1 and relative.sum() ** 2 < 0.5 * m * (relative**2).sum():
+            total += top + np.log(relative.mean())
+            parents = _systematic(relative, rng)
+            corner, value, mass = corner[parents], value[parents], mass[parents]
+            clusters, which = clusters[parents], which[parents]
+            log_weight[:] = 0.0
+    top = log_weight.max()
+    if top == -np.inf:
+        return top
+    return total + top + np.log(np.exp(log_weight - top).mean())
+
+
+@njit(nogil=True, cache=True)
+def _joined(value, corner, side, step, x, y, kernel, per, most, keep):
+    """Weight of a new cluster with one more point; with `keep`, its nodes are weighted by it."""
+    total = 0.0
+    for p in range(side):
+        dx = x - (corner[0] + p * step)
+        for q in range(side):
+            k = p * side + q
+            if value[k] > 0.0:
+                dy = y - (corner[1] + q * step)
+                w = value[k] * kernel_shape(kernel, (dx * dx + dy * dy) * per, most)
+                total += w
+                if keep:
+                    value[k] = w
+    return total
+
+
+@njit(nogil=True, cache=True)
+def _systematic(relative, rng):
+    """Rows in proportion to their weights, with one random number (systematic sampling)."""
+    m = relative.size
+    out = np.empty(m, np.int64)
+    unit = relative.sum() / m
+    reached, row = relative[0], 0
+    at = rng.random() * unit
+    for k in range(m):
+        while reached < at and row < m - 1:
+            row += 1
+            reached += relative[row]
+        out[k] = row
+        at += unit
+    return out
 
 
 @njit(nogil=True, cache=True)

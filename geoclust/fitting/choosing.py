@@ -14,7 +14,7 @@ from geoclust.area.study_area import StudyArea
 from geoclust.area.survey import Survey
 from geoclust.errors import CannotTell, UsageError, not_allowed
 from geoclust.fitting import status as verdicts
-from geoclust.fitting._tile_scores import log_densities
+from geoclust.fitting._tile_scores import log_density
 from geoclust.fitting.moments import ContrastChoices, fit_points
 from geoclust.fitting.posterior import default_priors, sample_posterior, starting_model
 from geoclust.fitting.sampling import Draws
@@ -37,7 +37,7 @@ FEWEST_TILES, MOST_TILES = 12, 100
 FOLDS = 6
 # draws that the predictions are averaged over, and parts of them that tell how well
 DRAWS = 400
-PARTS = 10
+PARTS = 8
 # shorter runs than those of a fit: the average over draws forgives more than an interval
 ENOUGH = 100.0
 ROUNDS = 2
@@ -115,9 +115,8 @@ class ModelComparison:
             difference, error = self.difference(best, name)
             figures = f"log score {difference:.1f} apart, standard error {error:.1f}"
             if self.told_apart(best, name):
-                lines.append(
-                    f"{_named(best)} predicts held-out ground better than {_named(name)} ({figures})."
-                )
+                than = f"better by {_named(best)} than by {_named(name)}"
+                lines.append(f"Held-out ground is predicted {than} ({figures}).")
             else:
                 lines.append(f"The data do not tell {_named(best)} and {_named(name)} apart ({figures}).")
         return lines
@@ -355,17 +354,34 @@ class TileScorer:
         self.rest_table = share_table(kind, rest, float(outside) + 1.1 * self.reach, self.scales, workers)
 
     def log_densities(self, tile: StudyArea, points: Floats, rng: np.random.Generator) -> Floats:
-        """(d,) log density of the points of a tile, local coordinates of the survey, for each draw."""
+        """Log density of the points of a tile, local coordinates of the survey, by parts of the draws.
+
+        Parameters
+        ----------
+        tile
+            The tile.
+        points
+            (n, 2)
+        rng
+            Generator.
+
+        Returns
+        -------
+        ndarray, (PARTS,)
+            Parts are of the same size but for one draw.
+        """
         shift = self.area.origin - tile.origin
         table = share_table(self.kind, tile, 1.1 * self.reach, self.scales, 1)
         box = np.array(tile.bounds) - np.tile(self.area.origin, 2)
         centres, start = self._near(box)
-        out = np.empty(len(self.draws))
-        log_densities(
-            self.kind.kernel_code, self.kind.reach_in_scales, np.ascontiguousarray(in_a_row(points)), box,
-            tile.area, self.rest_table, table, np.vstack([self.area.origin - self.rest.origin, shift]),
-            centres, start, self.draws, rng, out,
-        )  # fmt: skip
+        shifts = np.vstack([self.area.origin - self.rest.origin, shift])
+        row = np.ascontiguousarray(in_a_row(points))
+        out = np.empty(PARTS)
+        for k, part in enumerate(np.array_split(np.arange(len(self.draws)), PARTS)):
+            out[k] = log_density(
+                self.kind.kernel_code, self.kind.reach_in_scales, row, box, tile.area, self.rest_table, table,
+                shifts, centres, start[part[0] : part[-1] + 2], self.draws[part], rng,
+            )  # fmt: skip
         return out
 
     def _near(self, box: Floats) -> tuple[Floats, npt.NDArray[np.int64]]:
