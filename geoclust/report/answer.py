@@ -154,7 +154,9 @@ def radius_holding(fit: ClusterFit, share: float) -> tuple[float, tuple[float, f
     if limits is None:
         return radius, None
     if any(p.above for p in model.described):
-        # lengths hang on a shape as well: the radius of each draw
+        # lengths hang on a shape as well: the radius of each draw; a fit read from a file has none
+        if not fit.draws:
+            return radius, None
         rows = zip(*(fit.draws[p.name] for p in model.described), strict=True)
         radii = [type(model)(*row).reach(1.0 - share) for row in rows]
         return radius, (float(np.quantile(radii, 0.025)), float(np.quantile(radii, 0.975)))

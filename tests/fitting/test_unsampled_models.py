@@ -140,6 +140,8 @@ def test_variance_gamma_fit_and_what_is_said_of_it(survey, clustered):
     rows = zip(*(fit.draws[p.name] for p in fit.model.described), strict=True)
     radii = [type(fit.model)(*row).reach(0.5) for row in rows]
     assert limits == pytest.approx(tuple(np.quantile(radii, [0.025, 0.975])))
+    # a fit read from a file has intervals, but no draws
+    assert answer.radius_holding(dataclasses.replace(fit, draws={}), 0.5) == (radius, None)
 
 
 def test_the_answer_tells_both_levels(survey, fit):
