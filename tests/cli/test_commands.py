@@ -112,6 +112,22 @@ def test_fit_is_assessed(survey_file, monkeypatch, capsys):
     assert record["p_value"] > 0.05
 
 
+@pytest.mark.parametrize(
+    ("more", "told"),
+    [
+        (["--against", "gauss"], "model must be one of"),
+        (["--against", "nested-thomas"], "nested-thomas cannot be compared"),
+        (["--against", "matern-cluster", "--covariate", "none.tif"], "--against does not go with --covariate"),
+    ],
+)
+def test_comparisons_that_cannot_be_made(more, told, survey_file, capsys):
+    """Told before anything is fitted."""
+    assert run(["fit", *both(survey_file), "--seed", "1", *more]) == 2
+    captured = capsys.readouterr()
+    assert told in captured.err
+    assert captured.out == ""
+
+
 def test_random_points_end_in_cannot_tell(survey_file, tmp_path, capsys):
     quick = ["--method", "minimum-contrast", "--bootstrap", "0", "--seed", "1"]
     assert run(["fit", *at_random(survey_file), *quick, "--json"]) == 3
