@@ -57,7 +57,7 @@ class MaternCluster(ClusterModel):
         return np.column_stack([distance * np.cos(turn), distance * np.sin(turn)])
 
     def reach(self, share: float) -> float:
-        return self.radius
+        return float(self.radius * np.sqrt(max(1.0 - share, 0.0)))
 
     def sibling_density(self, r: npt.ArrayLike) -> Floats:
         z = np.minimum(np.asarray(r, dtype=np.float64) / (2.0 * self.radius), 1.0)

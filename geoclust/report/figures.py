@@ -67,7 +67,7 @@ def curve_figure(test: EnvelopeTest, *, fit: ClusterFit | None = None) -> Figure
         ax.set_xlim(0, r[-1])
         ax.set_ylim(*_span(curve.values - off, *([] if fit is None else [modelled[curve.function](r) - off]),
                            curve.theory - off, *_finite_limits(test, off)))  # fmt: skip
-        ax.legend(loc="upper right", handlelength=1.6)
+        ax.legend(loc="best", handlelength=1.6)
         return figure
 
 

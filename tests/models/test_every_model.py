@@ -132,6 +132,9 @@ def test_beyond_the_reach_lie_no_more_than_said(model, share):
     reach = model.reach(share)
     beyond = 1.0 - ring_integral(model.offspring_density, 0.0, reach)
     assert beyond <= share * (1 + 1e-6) + 1e-9
+    # the radius that holds half of a cluster, or 95 %, is told to people: it must not be too wide either
+    if share >= 0.05:
+        assert beyond == pytest.approx(share, rel=0.01)
 
 
 def test_share_of_the_study_area_is_that_of_the_offspring(model):
