@@ -163,7 +163,7 @@ class Assessment:
 def _where(name: str, start: float, end: float, side: str) -> str:
     at = f"{start:.3g} m" if start == end else f"{start:.3g} to {end:.3g} m"
     if name == "J":
-        return f"{'more' if side == 'above' else 'less'} isolated points than expected at {at}"
+        return f"{'more' if side == 'above' else 'fewer'} isolated points than expected at {at}"
     of = "points with a neighbour" if name == "G" else "places with a point"
     return f"{'more' if side == 'above' else 'fewer'} {of} within {at} than expected"
 

@@ -117,7 +117,10 @@ def test_fit_is_assessed(survey_file, monkeypatch, capsys):
     [
         (["--against", "gauss"], "model must be one of"),
         (["--against", "nested-thomas"], "nested-thomas cannot be compared"),
-        (["--against", "matern-cluster", "--covariate", "none.tif"], "--against does not go with --covariate"),
+        (
+            ["--against", "matern-cluster", "--covariate", "none.tif"],
+            "--against does not go with --covariate",
+        ),
     ],
 )
 def test_comparisons_that_cannot_be_made(more, told, survey_file, capsys):
