@@ -26,7 +26,7 @@ _CURVES = Step(
     "pair, averaged over directions. For the fit it is weighted by the inverse of the share of the circle "
     "round its first point, through its second, that lies in the study area. Both are computed exactly for "
     "the drawn boundary with its holes and parts. The bandwidth of the kernel of g is 0.15 mean spacings "
-    "unless it was set; the squared intensity is estimated by n(n − 1)/|W|².",
+    "unless it was set; the squared intensity is estimated by n(n − 1)/|W|⁠².",
     (
         "K(r) = |W|² / n(n − 1) · Σ 1(d ≤ r) / γ̄(d)",
         "K(r) = |W|² / (n(n − 1) |W⁽ʳ⁾|) · Σ 1(d ≤ r) / share(x, d)",
