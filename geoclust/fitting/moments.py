@@ -31,7 +31,7 @@ Progress = Callable[[str, int, int], None]
 NODES = 128
 # K and L gather the noise of all shorter distances, so their range follows the clusters closely; g does
 # not, and hardly cares (tests/studies/contrast_defaults.py)
-RANGE_IN_SCALES = {"K": 4.0, "g": 12.0, "L": 4.0}
+RANGE_IN_SCALES = {"K": 4.0, "g": 12.0, "L": 3.0}
 # with two levels the tail of the large clusters has to tell them from randomness
 LEVELS_IN_SCALES = {"K": 6.0, "g": 12.0, "L": 6.0}
 
