@@ -23,7 +23,7 @@ from geoclust.fitting.moments import (
     clustering_p_value,
     factors_of,
     measured_contrast,
-    nesting_test,
+    second_level_of,
 )
 from geoclust.fitting.moments import RANGE_IN_SCALES as CURVE_RANGE
 from geoclust.fitting.pair_likelihoods import COMPOSITE, PALM, PairLikelihood
@@ -75,14 +75,7 @@ def fit_pairs(
     UsageError
         If the range does not fit the study area.
     """
-    widest = 0.25 * area.side
-    r_min = choices.r_min or 0.0
-    if choices.r_max is not None and choices.r_max > area.diameter:
-        raise not_allowed(
-            "r_max", f"at most the width of the study area, {area.diameter:.4g} m", choices.r_max
-        )
-    if choices.r_max is None and r_min > 0.5 * widest:
-        raise not_allowed("r_min", f"at most {0.5 * widest:.4g} m here, unless r_max is given too", r_min)
+    widest, r_min = choices.range_within(area)
     intensity = len(local_xy) / area.area
     width = default_bandwidth(intensity)
 
@@ -139,9 +132,10 @@ def fit_by_likelihood(
         contrast, _ = measured_contrast(
             kind, survey.local_xy, survey.area, plain, far, workers, factors_of(intensity)
         )
-        second = nesting_test(
-            survey, kind, contrast, plain, level_simulations, level_seed, workers, progress, intensity
-        )
+        second = second_level_of(
+            kind, contrast, survey.local_xy, survey.area, plain, level_simulations, level_seed, workers,
+            progress, intensity,
+        )  # fmt: skip
     refused = second is not None and second.p_value > verdicts.TEST_LEVEL
     draws = bootstrap_draws(
         found.model, survey.area, fit_again, 0 if refused else bootstrap, boot_seed, workers=workers,

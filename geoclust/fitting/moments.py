@@ -74,6 +74,23 @@ class ContrastChoices:
         if not np.isfinite(self.distance_weight):
             raise not_allowed("distance_weight", "a finite number", self.distance_weight)
 
+    def range_within(self, area: StudyArea) -> tuple[float, float]:
+        """Widest range to take by itself, a quarter of the side, and the smallest distance, metres.
+
+        Raises
+        ------
+        UsageError
+            If the range does not fit the study area.
+        """
+        widest, r_min = 0.25 * area.side, self.r_min or 0.0
+        if self.r_max is not None and self.r_max > area.diameter:
+            raise not_allowed(
+                "r_max", f"at most the width of the study area, {area.diameter:.4g} m", self.r_max
+            )
+        if self.r_max is None and r_min > 0.5 * widest:
+            raise not_allowed("r_min", f"at most {0.5 * widest:.4g} m here, unless r_max is given too", r_min)
+        return widest, r_min
+
 
 @dataclass(frozen=True, eq=False)
 class MomentFit:
@@ -97,14 +114,7 @@ def fit_points(
 
     `factors` are one over the intensity at each point, for the weighted curve, or None.
     """
-    widest = 0.25 * area.side
-    r_min = choices.r_min or 0.0
-    if choices.r_max is not None and choices.r_max > area.diameter:
-        raise not_allowed(
-            "r_max", f"at most the width of the study area, {area.diameter:.4g} m", choices.r_max
-        )
-    if choices.r_max is None and r_min > 0.5 * widest:
-        raise not_allowed("r_min", f"at most {0.5 * widest:.4g} m here, unless r_max is given too", r_min)
+    widest, r_min = choices.range_within(area)
     r_max = choices.r_max if choices.r_max is not None else widest
     intensity = len(local_xy) / area.area
     contrast, width = measured_contrast(kind, local_xy, area, choices, r_max, workers, factors)
@@ -199,8 +209,8 @@ def fit_by_contrast(
     second: SecondLevel | None = None
     if len(kind.intensity_names) > 1 and level_simulations and p_value <= verdicts.TEST_LEVEL:
         second = second_level_of(
-            kind, found, survey.local_xy, survey.area, choices, level_simulations, level_seed, workers,
-            progress, intensity,
+            kind, found.contrast, survey.local_xy, survey.area, choices, level_simulations, level_seed,
+            workers, progress, intensity,
         )  # fmt: skip
     refused = second is not None and second.p_value > verdicts.TEST_LEVEL
     draws = bootstrap_draws(
@@ -243,32 +253,9 @@ def fit_by_contrast(
     )
 
 
-def nesting_test(
-    survey: Survey,
-    kind: type[ClusterModel],
-    contrast: Contrast,
-    choices: ContrastChoices,
-    simulations: int,
-    rng: np.random.Generator,
-    workers: int | None,
-    progress: Progress | None,
-    intensity: Intensity | None,
-) -> SecondLevel:
-    """Whether the second level of a nested process earns its place, by the contrast of the survey's curve."""
-
-    def measure(points: Floats, r_max: float, again: Intensity | None) -> Contrast:
-        own = replace(choices, r_max=r_max)
-        return measured_contrast(kind, points, survey.area, own, r_max, factors=factors_of(again))[0]
-
-    return second_level_test(
-        contrast, survey.local_xy, survey.area, measure, simulations, rng, workers=workers,
-        progress=progress, intensity=intensity,
-    )  # fmt: skip
-
-
 def second_level_of(
     kind: type[ClusterModel],
-    found: MomentFit,
+    contrast: Contrast,
     local_xy: Floats,
     area: StudyArea,
     choices: ContrastChoices,
@@ -278,14 +265,14 @@ def second_level_of(
     progress: Progress | None = None,
     intensity: Intensity | None = None,
 ) -> SecondLevel:
-    """Test whether the second level of a nested fit earns its place, with curves measured as in the fit."""
+    """Whether the second level of a nested process earns its place, by the contrast of the survey's curve."""
 
     def measure(points: Floats, r_max: float, again: Intensity | None) -> Contrast:
         own = replace(choices, r_max=r_max)
         return measured_contrast(kind, points, area, own, r_max, factors=factors_of(again))[0]
 
     return second_level_test(
-        found.contrast, local_xy, area, measure, simulations, rng, workers=workers, progress=progress,
+        contrast, local_xy, area, measure, simulations, rng, workers=workers, progress=progress,
         intensity=intensity,
     )  # fmt: skip
 

@@ -208,7 +208,7 @@ def test_a_single_level_is_enough_for_a_simple_survey(single_points):
 
     def tested(workers: int):
         seed = np.random.default_rng(4)
-        return second_level_of(NestedThomas, found, single_points, PLOT, choices, 39, seed, workers)
+        return second_level_of(NestedThomas, found.contrast, single_points, PLOT, choices, 39, seed, workers)
 
     single = tested(1)
     assert single == tested(3)

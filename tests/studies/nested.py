@@ -45,7 +45,9 @@ def one_survey(truth: ClusterModel, number: int, area: gc.StudyArea, simulations
     points = draw_pattern(truth, area, drawn).points
     choices = ContrastChoices()
     found = fit_points(NestedThomas, points, area, choices)
-    second = second_level_of(NestedThomas, found, points, area, choices, simulations, tested, workers=1)
+    second = second_level_of(
+        NestedThomas, found.contrast, points, area, choices, simulations, tested, workers=1
+    )
     status, _ = moment_verdict(
         found.fit.model, area.area, r_max=found.r_max, on_bound=found.fit.on_bound, bounds=found.fit.bounds,
         p_value=0.0, intervals={},
