@@ -95,7 +95,7 @@ def test_the_whole_job_with_covariates(layers: Path, capsys: pytest.CaptureFixtu
     survey = gc.read_survey(
         layers / "survey.gpkg", layers / "survey.gpkg", points_layer="finds", area_layer="plot"
     )
-    with pytest.raises(InputError, match="fit beyond covariates"):
+    with pytest.raises(InputError, match="a fit with the covariates slope, rough; given were none"):
         read_fit(out / "fit.json", survey)
 
 

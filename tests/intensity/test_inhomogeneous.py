@@ -72,7 +72,9 @@ def test_clusters_are_seen_beyond_the_terrain():
     assert tests["g"].curve.bandwidth_by == "cross-validation, Guan 2007"
     # the curve is that of the weighted estimate
     curve = tests["g"].curve
-    alone = pair_correlation(survey, RADII, curve.bandwidth, intensity_at_points=intensity.at(survey.xy))
+    alone = pair_correlation(
+        survey, RADII, curve.bandwidth, "rigid-motion", intensity_at_points=intensity.at(survey.xy)
+    )
     assert np.allclose(alone.values, curve.values, rtol=1e-9)
 
 
