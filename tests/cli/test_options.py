@@ -137,8 +137,11 @@ def test_zones_are_a_file_or_a_layer_of_the_area(tmp_path):
         ),
         (
             ["simulate", "a.gpkg", "b.gpkg", "--out", "x.gpkg", "--model", "variance-gamma"]
-            + [w for v in ("parent_intensity=1", "scale=9", "shape=-0.5", "mean_offspring=4")
-               for w in ("--parameter", v)],
+            + [
+                w
+                for v in ("parent_intensity=1", "scale=9", "shape=-0.5", "mean_offspring=4")
+                for w in ("--parameter", v)
+            ],
             "shape must be a finite number above -0.5",
         ),
         (
