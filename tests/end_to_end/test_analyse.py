@@ -187,7 +187,7 @@ def test_regular_patterns_end_in_cannot_tell(file, side, tmp_path, capsys):
     assert "chance alone" in (out / "report.html").read_text("utf-8")
 
 
-@pytest.mark.parametrize("seconds", [0.2, 2.0, 5.0])
+@pytest.mark.parametrize("seconds", [0.5, 2.0, 5.0])
 @pytest.mark.parametrize("sent", [signal.SIGINT, signal.SIGKILL], ids=["interrupt", "kill"])
 def test_stopped_at_any_moment(sent, seconds, survey_file, tmp_path):
     """Either no results folder or a whole one; what was there before is as it was.
